@@ -1,0 +1,119 @@
+package main
+
+import (
+	"encoding/json"
+	"fmt"
+	"io"
+	"math"
+	"slices"
+	"strings"
+	"text/tabwriter"
+	"time"
+
+	"steelyard/monitor"
+	"steelyard/rules"
+	"steelyard/rules/evidence"
+)
+
+type explainVerb struct {
+	Alarm string `arg:"" help:"The alarm: A7."`
+}
+
+// Run shows what an alarm rests on.
+func (v *explainVerb) Run(d *desk) error {
+	number, err := alarmNumber(v.Alarm)
+	if err != nil {
+		return err
+	}
+	c, _, cfg, err := d.counter()
+	if err != nil {
+		return err
+	}
+	defer c.Close()
+	x, err := c.Explain(number)
+	if err != nil {
+		return err
+	}
+	if d.JSON {
+		return d.object(x)
+	}
+	return printExplanation(d.out, x, cfg.Site.Zone)
+}
+
+func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) error {
+	at := func(t time.Time) string { return clock(t, zone) }
+	fmt.Fprintf(w, "%s, %s: %s\n\n", x.Site, x.Alarm, x.Says)
+	fmt.Fprintf(w, "Rule %q, version %s\n  claim %s\n  raise %v, clear %v, least units %d, priority %s, told: %s\n",
+		x.Rule.Name, x.Version, x.Rule.Claim, x.Rule.Raise, x.Rule.Clear, x.Rule.LeastUnits, x.Rule.Priority,
+		strings.Join(x.Rule.Tell, ", "))
+	for _, p := range x.Priors {
+		fmt.Fprintf(w, "  %s: %s family, prior %s, remembers %s\n", p.Characteristic, p.Family, plainJSON(p.Prior), plainJSON(p.Remember))
+	}
+	fmt.Fprintf(w, "  in force since %s (record %d): configuration %s, SHA-256 %s, adopted by %s\n",
+		at(x.Adopted.At), x.Adopted.Record, x.Adopted.File, x.Adopted.Digest, x.Adopted.By)
+	cr := &x.Crossing
+	fmt.Fprintf(w, "\nIt crossed %v at %s (record %d): probability %.17g, contrary %.17g\n", cr.Raise, at(cr.At), cr.Record, cr.Probability, cr.Contrary)
+	if cr.File != "" {
+		fmt.Fprintf(w, "  with file %s of %s, %d rows, lines %d to %d, SHA-256 %s\n", cr.File, cr.Source, cr.Rows, cr.FirstLine, cr.LastLine, cr.SHA256)
+	}
+	t := tabwriter.NewWriter(w, 0, 4, 2, ' ', 0)
+	fmt.Fprintln(t, "\nWhat was believed\tunits\testimate\t95 % between\tunit")
+	for _, p := range x.Processes {
+		fmt.Fprintf(t, "  %s before\t%s\t%s\n", p.Process, units(p.Before.Units), estimateCells(&p.Before))
+		fmt.Fprintf(t, "  %s after\t%s\t%s\n", p.Process, units(p.After.Units), estimateCells(&p.After))
+	}
+	fmt.Fprintln(t, "\nLooks around the crossing\trecord\tprobability\todds\tfile")
+	for _, l := range x.Looks {
+		p, odds := lookText(&l)
+		mark := " "
+		if l.Crossed {
+			mark = ">"
+		}
+		fmt.Fprintf(t, "%s %s\t%d\t%s\t%s\t%s\n", mark, at(l.At), l.Record, p, odds, l.File)
+	}
+	fmt.Fprintln(t, "\nBatches it rests on\trecord\tsource and file\tvalues\tSHA-256")
+	if x.Earlier > 0 {
+		fmt.Fprintf(t, "  and %d earlier\t\t\t\t\n", x.Earlier)
+	}
+	for _, b := range x.Batches {
+		fmt.Fprintf(t, "  %s\t%d\t%s %s\t%s\t%.16s…\n", at(b.At), b.Record, b.Source, b.File, valuesText(&b), b.SHA256)
+	}
+	if err := t.Flush(); err != nil {
+		return err
+	}
+	fmt.Fprintln(w, "\nWhat happened to it")
+	for _, s := range x.Steps {
+		fmt.Fprintf(w, "  %s (record %d) %s: %s\n", at(s.At), s.Record, s.Cause, s.Text)
+	}
+	_, err := fmt.Fprintln(w, "\n"+x.Caution)
+	return err
+}
+
+func lookText(l *monitor.LookAt) (p, odds string) {
+	if l.Probability == nil {
+		return "-", l.Withheld
+	}
+	o := evidence.Odds{LogFor: math.Log(*l.Probability), LogAgainst: math.Log(*l.Contrary)}
+	return rules.ProbabilityText(o), rules.OddsText(o)
+}
+
+func valuesText(b *monitor.BatchOf) string {
+	var parts []string
+	for process, n := range b.Values {
+		parts = append(parts, fmt.Sprintf("%d of %s", n, process))
+	}
+	slices.Sort(parts)
+	if b.HeldRows > 0 {
+		parts = append(parts, fmt.Sprintf("%d rows held", b.HeldRows))
+	}
+	return strings.Join(parts, ", ")
+}
+
+// plainJSON shows a small setting as it stands in the journal.
+func plainJSON(v any) string {
+	text, err := json.Marshal(v)
+	if err != nil {
+		return err.Error()
+	}
+	return string(text)
+}

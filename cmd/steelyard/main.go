@@ -1,0 +1,159 @@
+// Steelyard weighs parallel production lines against one another while their rigs drop
+// measurement files. README.md says what it does; DEVELOPERS.md how it is built.
+//
+// What a person sees follows these rules. Answers go to standard output; progress, remarks
+// and errors to standard error. An error is one sentence that begins with "steelyard: " and
+// says what to do. With --json, standard output is one object a line with a "type", and an
+// error has the same shape. Progress shows on a terminal only.
+package main
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io"
+	"os"
+
+	"github.com/alecthomas/kong"
+
+	"steelyard/monitor"
+	"steelyard/monitor/config"
+	"steelyard/store"
+)
+
+// commandLine is every verb with what they have in common.
+type commandLine struct {
+	Config string `short:"c" default:"config.toml" placeholder:"FILE" help:"The configuration (config.toml)."`
+	JSON   bool   `name:"json" help:"Answer for machines: one JSON object a line."`
+
+	Run         runVerb         `cmd:"" help:"Watch the drop folders until told to stop."`
+	Demo        demoVerb        `cmd:"" help:"Show the whole of it at work on invented rigs, in a minute."`
+	Check       checkVerb       `cmd:"" help:"Read the configuration, and say how sample files would be read."`
+	Status      statusVerb      `cmd:"" help:"Say where everything stands."`
+	Acknowledge acknowledgeVerb `cmd:"" help:"Answer an alarm."`
+	Explain     explainVerb     `cmd:"" help:"Show what an alarm rests on."`
+	Daylog      daylogVerb      `cmd:"" help:"Write the log of a production day."`
+}
+
+// desk carries what the verbs need from the outside.
+type desk struct {
+	*commandLine
+	out, err io.Writer
+}
+
+// Exit statuses, as README.md lists them.
+const (
+	exitDone          = 0
+	exitFailed        = 1
+	exitUsage         = 2
+	exitHeld          = 10 // done, but something was held
+	exitAlarm         = 11 // an alarm stands, where that was asked
+	exitUnverified    = 12
+	exitStoreTaken    = 13
+	exitConfiguration = 78
+	exitInterrupted   = 130
+)
+
+// outcome ends a verb with an exit status that is not a failure; there is nothing to print.
+type outcome int
+
+func (o outcome) Error() string { return fmt.Sprintf("exit status %d", int(o)) }
+
+func main() { os.Exit(run(os.Args[1:], os.Stdout, os.Stderr)) }
+
+// run is the whole program but for the process around it; it returns the exit status.
+func run(args []string, out, errOut io.Writer) int {
+	line := &commandLine{}
+	status, exited := 0, false
+	parser, err := kong.New(line,
+		kong.Name("steelyard"),
+		kong.Description("Weighs parallel production lines against one another while their rigs drop measurement files.\n\n"+
+			"It never releases or rejects product, and does not replace the site's release procedures.\n\n"+
+			"Begin with:  steelyard demo"),
+		kong.Writers(out, errOut), kong.ConfigureHelp(kong.HelpOptions{Compact: true}),
+		kong.Exit(func(code int) { status, exited = code, true }),
+	)
+	if err != nil {
+		fmt.Fprintln(errOut, "steelyard:", err)
+		return exitFailed
+	}
+	if len(args) == 0 {
+		args = []string{"--help"}
+		status = exitUsage
+	}
+	ctx, err := parser.Parse(args)
+	if exited {
+		return status
+	}
+	d := &desk{commandLine: line, out: out, err: errOut}
+	if err != nil {
+		d.say(err, exitUsage)
+		fmt.Fprintln(errOut, "steelyard --help lists the verbs, and steelyard VERB --help what one takes.")
+		return exitUsage
+	}
+	return d.end(ctx.Run(d))
+}
+
+// end maps the error of a verb to the exit status, and says it once.
+func (d *desk) end(err error) int {
+	var (
+		silent outcome
+		faults config.Faults
+	)
+	switch {
+	case err == nil:
+		return exitDone
+	case errors.As(err, &silent):
+		return int(silent)
+	case errors.As(err, &faults):
+		return d.say(err, exitConfiguration)
+	case errors.Is(err, store.ErrHeld):
+		return d.say(err, exitStoreTaken)
+	case errors.Is(err, store.ErrStorage):
+		return d.say(err, exitFailed)
+	}
+	return d.say(err, exitFailed)
+}
+
+// say prints an error, in the shape that was asked for.
+func (d *desk) say(err error, status int) int {
+	if d.JSON {
+		_ = d.object(struct {
+			Type  string `json:"type"`
+			Error string `json:"error"`
+			Exit  int    `json:"exit"`
+		}{"error", err.Error(), status})
+		return status
+	}
+	fmt.Fprintln(d.err, "steelyard:", err)
+	return status
+}
+
+// object prints one JSON object on a line of its own.
+func (d *desk) object(v any) error {
+	text, err := json.Marshal(v)
+	if err != nil {
+		return err
+	}
+	_, err = fmt.Fprintf(d.out, "%s\n", text)
+	return err
+}
+
+// configuration reads the configuration that the command line names.
+func (d *desk) configuration() (*config.Config, error) {
+	cfg, err := config.Load(d.Config)
+	if errors.Is(err, os.ErrNotExist) {
+		return nil, fmt.Errorf("there is no configuration %s here; name one with --config, or copy config.example.toml and change it", d.Config)
+	}
+	return cfg, err
+}
+
+// counter reaches the running daemon, or the store itself.
+func (d *desk) counter() (monitor.Counter, bool, *config.Config, error) {
+	cfg, err := d.configuration()
+	if err != nil {
+		return nil, false, nil, err
+	}
+	c, running, err := monitor.Reach(cfg, monitor.Options{Log: d.quietLog()})
+	return c, running, cfg, err
+}

@@ -1,0 +1,94 @@
+package posterior
+
+import (
+	"fmt"
+	"math"
+)
+
+// Accepts says in a sentence why a value, of so many or over such an exposure, can't be one
+// of the family's; nil where it can.
+func (f Family) Accepts(value, of float64) error {
+	if math.IsNaN(value) || math.IsInf(value, 0) || math.IsNaN(of) || math.IsInf(of, 0) {
+		return fmt.Errorf("the value %v of %v is not a finite number", value, of)
+	}
+	switch f {
+	case NormalFamily:
+		return nil
+	case LognormalFamily:
+		if value <= 0 {
+			return fmt.Errorf("the value %v is not above 0, as the lognormal family needs", value)
+		}
+		return nil
+	case BinomialFamily:
+		if value < 0 || value > of || of < 1 || value != math.Trunc(value) || of != math.Trunc(of) {
+			return fmt.Errorf("%v counted of %v: whole numbers are expected, with 0 <= counted <= of", value, of)
+		}
+		return nil
+	case PoissonFamily:
+		if value < 0 || value != math.Trunc(value) || of <= 0 {
+			return fmt.Errorf("the count %v over the exposure %v: a whole number from 0 on and an exposure above 0 are expected",
+				value, of)
+		}
+		return nil
+	}
+	return fmt.Errorf("there is no family %q; normal, lognormal, binomial and poisson are", string(f))
+}
+
+// Add takes one observation: a value (normal, lognormal), so many counted `of` so many
+// (binomial), or a count over the exposure `of` (poisson). What Accepts refuses must not get
+// here.
+func (s Sums) Add(f Family, value, of float64) Sums {
+	switch f {
+	case NormalFamily:
+		return s.push(pair{hi: value})
+	case LognormalFamily:
+		return s.push(logPair(value))
+	}
+	return Sums{N: s.N + 1, Total: s.Total + value, Exposure: s.Exposure + of}
+}
+
+// push is Welford's update (Technometrics 4, 1962) in pairs.
+func (s Sums) push(x pair) Sums {
+	n := s.N + 1
+	mean := pair{s.Mean, s.MeanLow}
+	d := x.add(mean.neg())
+	mean = mean.add(d.over(pair{hi: n}))
+	ss := pair{s.SS, s.SSLow}.add(d.mul(d).mul(pair{hi: s.N}).over(pair{hi: n}))
+	return Sums{N: n, Mean: mean.hi, MeanLow: mean.lo, SS: ss.hi, SSLow: ss.lo}
+}
+
+// Merge is what both say together (Chan, Golub & LeVeque, The American Statistician 37, 1983).
+// The two must be of one family.
+func Merge(f Family, a, b Sums) Sums {
+	switch {
+	case a.N == 0:
+		return b
+	case b.N == 0:
+		return a
+	case f == BinomialFamily || f == PoissonFamily:
+		return Sums{N: a.N + b.N, Total: a.Total + b.Total, Exposure: a.Exposure + b.Exposure}
+	}
+	n := twoSum(a.N, b.N)
+	meanA, meanB := pair{a.Mean, a.MeanLow}, pair{b.Mean, b.MeanLow}
+	d := meanB.add(meanA.neg())
+	mean := meanA.add(d.mul(pair{hi: b.N}).over(n))
+	between := d.mul(d).mul(twoProduct(a.N, b.N)).over(n)
+	ss := pair{a.SS, a.SSLow}.add(pair{b.SS, b.SSLow}).add(between)
+	return Sums{N: n.hi, Mean: mean.hi, MeanLow: mean.lo, SS: ss.hi, SSLow: ss.lo}
+}
+
+// Scale weighs the evidence down by a factor, the average staying where it is.
+func (s Sums) Scale(by float64) Sums {
+	ss := pair{s.SS, s.SSLow}.mul(pair{hi: by})
+	return Sums{N: float64(s.N * by), Mean: s.Mean, MeanLow: s.MeanLow, SS: ss.hi, SSLow: ss.lo,
+		Total: float64(s.Total * by), Exposure: float64(s.Exposure * by)}
+}
+
+// Units is how many units the sums speak of: for binomial how many were looked at, else the
+// observations. Fractional under a discount.
+func (s Sums) Units(f Family) float64 {
+	if f == BinomialFamily {
+		return s.Exposure
+	}
+	return s.N
+}

@@ -1,0 +1,161 @@
+package rules
+
+import (
+	"slices"
+	"strings"
+	"time"
+
+	"steelyard/rules/claim"
+	"steelyard/rules/evidence"
+	"steelyard/rules/posterior"
+)
+
+// Standing is where one process stands.
+type Standing struct {
+	Process      string             `json:"process"`
+	Label        string             `json:"label"`
+	Line         string             `json:"line"`
+	Unit         string             `json:"unit,omitempty"`
+	Quantity     string             `json:"quantity"` // what Estimate is of: mean, median, proportion, rate
+	Units        float64            `json:"units"`    // that the evidence rests on
+	Taken        int64              `json:"taken"`    // measurements since the store began
+	Estimate     *evidence.Interval `json:"estimate,omitempty"`
+	Why          string             `json:"why,omitempty"` // there is no estimate
+	Segment      int                `json:"segment"`
+	SegmentSince time.Time          `json:"segment_since,omitzero"`
+	SegmentNote  string             `json:"segment_note,omitempty"`
+	LastMeasured time.Time          `json:"last_measured,omitzero"`
+	LastTaken    time.Time          `json:"last_taken,omitzero"`
+}
+
+// RuleStanding is where one rule stands.
+type RuleStanding struct {
+	Rule     string     `json:"rule"`
+	Version  string     `json:"version"`
+	Claim    string     `json:"claim"`
+	Says     string     `json:"says"`
+	Priority string     `json:"priority"`
+	Raise    float64    `json:"raise"`
+	Clear    float64    `json:"clear"`
+	State    AlarmState `json:"state"`
+	Since    time.Time  `json:"since,omitzero"`
+	Alarm    int        `json:"alarm,omitempty"` // the newest of this rule; 0 before the first
+	Raised   time.Time  `json:"raised,omitzero"`
+	Look     *Look      `json:"look,omitempty"` // the last one
+	LookAt   time.Time  `json:"look_at,omitzero"`
+}
+
+// Plan is a copy of the plan in force.
+func (s *State) Plan() Plan { return s.plan }
+
+// Standings are where the plan's processes stand, in its order.
+func (s *State) Standings() []Standing {
+	var all []Standing
+	for _, c := range s.plan.Characteristics {
+		for _, line := range c.Lines {
+			all = append(all, s.standing(&c, line))
+		}
+	}
+	return all
+}
+
+func (s *State) standing(c *Characteristic, line string) Standing {
+	name := ProcessName(c.Name, line)
+	p := s.processes[name]
+	kind := centre(c.Family)
+	st := Standing{
+		Process: name, Label: c.Label(), Line: line, Unit: c.Unit, Quantity: string(kind),
+		Units: units(p), Taken: p.Taken, Segment: p.Segment, SegmentSince: p.SegmentSince,
+		SegmentNote: p.SegmentNote, LastMeasured: p.LastMeasured, LastTaken: p.LastTaken,
+	}
+	q, err := s.Centre(name)
+	switch {
+	case err != nil:
+		st.Why = err.Error()
+	case !finite(q.Median, q.Lower, q.Upper):
+		st.Why = "the data and the prior do not yet bound it"
+	default:
+		st.Estimate = &q
+	}
+	return st
+}
+
+// Centre is the estimate of a process's centre: mean, median, proportion or rate.
+func (s *State) Centre(process string) (evidence.Interval, error) {
+	c, _, ok := s.plan.split(process)
+	if !ok {
+		return evidence.Interval{}, errUnknown(process)
+	}
+	of := claim.Claim{
+		Kind: centre(c.Family), Form: claim.Linear, Test: claim.Above,
+		Terms: []claim.Term{{Weight: 1}}, Processes: []string{process},
+	}
+	return evidence.Estimate(&of, []evidence.Process{s.belief(process)})
+}
+
+// centre is the quantity by which a family's processes are compared first.
+func centre(f posterior.Family) claim.Kind {
+	switch f {
+	case posterior.LognormalFamily:
+		return claim.Median
+	case posterior.BinomialFamily:
+		return claim.Proportion
+	case posterior.PoissonFamily:
+		return claim.Rate
+	}
+	return claim.Mean
+}
+
+// Sums are the statistics that a process's evidence rests on now.
+func (s *State) Sums(process string) (posterior.Sums, error) {
+	p, ok := s.processes[process]
+	if !ok {
+		return posterior.Sums{}, errUnknown(process)
+	}
+	return p.memory.Sums(), nil
+}
+
+type errUnknown string
+
+func (e errUnknown) Error() string { return "there is no process " + string(e) + " in the plan" }
+
+// RuleStandings are where the plan's rules stand, in its order.
+func (s *State) RuleStandings() []RuleStanding {
+	var all []RuleStanding
+	for _, r := range s.ready {
+		a := s.alarms[r.Name]
+		st := RuleStanding{
+			Rule: r.Name, Version: r.version, Claim: r.Claim, Says: s.plan.Says(r.Name), Priority: r.Priority,
+			Raise: r.Raise, Clear: r.Clear, State: a.State, Since: a.Since, Alarm: a.Number, Raised: a.Raised,
+			LookAt: a.LastAt,
+		}
+		if a.Last != nil {
+			look := *a.Last
+			st.Look = &look
+		}
+		all = append(all, st)
+	}
+	return all
+}
+
+// Alarms are the rules whose state is not normal, the highest priority first and within one
+// priority the newest first.
+func (s *State) Alarms() []RuleStanding {
+	var standing []RuleStanding
+	for _, r := range s.RuleStandings() {
+		if r.State != Normal {
+			standing = append(standing, r)
+		}
+	}
+	slices.SortStableFunc(standing, func(a, b RuleStanding) int {
+		if d := urgency(b.Priority) - urgency(a.Priority); d != 0 {
+			return d
+		}
+		return b.Alarm - a.Alarm
+	})
+	return standing
+}
+
+func urgency(priority string) int {
+	return strings.Index("low medium high", priority)
+}

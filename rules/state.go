@@ -1,0 +1,490 @@
+package rules
+
+import (
+	"encoding/json"
+	"fmt"
+	"math"
+	"slices"
+	"strings"
+	"time"
+
+	"steelyard/rules/claim"
+	"steelyard/rules/evidence"
+	"steelyard/rules/posterior"
+)
+
+// State is everything the engine knows. It is not safe for concurrent use: the monitor's one
+// writer owns it, and readers are given copies.
+type State struct {
+	plan      Plan
+	ready     []weighed
+	rulesOf   map[string][]int // process to indexes of the rules that speak of it
+	processes map[string]*process
+	alarms    map[string]*alarm // rule name to its alarm
+	counters  counters
+	touched   map[string]bool // pieces changed since Pieces was last called
+
+	scratch []evidence.Process
+}
+
+// process is what the engine knows of one process.
+type process struct {
+	Family       posterior.Family   `json:"family"`
+	Remember     posterior.Remember `json:"remember"`
+	Taken        int64              `json:"taken"`   // measurements since the store began
+	Segment      int                `json:"segment"` // number of the segment, counted from 0
+	SegmentSince time.Time          `json:"segment_since,omitzero"`
+	SegmentNote  string             `json:"segment_note,omitempty"`
+	LastMeasured time.Time          `json:"last_measured,omitzero"`
+	LastTaken    time.Time          `json:"last_taken,omitzero"`
+	Memory       []byte             `json:"memory"`
+
+	memory *posterior.Memory
+}
+
+// alarm is what the engine knows of one rule.
+type alarm struct {
+	Number   int        `json:"number"` // 0 before the first raise
+	Step     int        `json:"step"`
+	State    AlarmState `json:"state"`
+	Since    time.Time  `json:"since,omitzero"` // of State
+	Raised   time.Time  `json:"raised,omitzero"`
+	Version  string     `json:"version"`
+	Last     *Look      `json:"last,omitempty"`
+	LastAt   time.Time  `json:"last_at,omitzero"`
+	LookedAt uint64     `json:"looked_at"` // event of the last look
+}
+
+type counters struct {
+	Alarms int `json:"alarms"` // raised so far
+}
+
+// NewState is the state before the first event.
+func NewState() *State {
+	return &State{
+		rulesOf:   map[string][]int{},
+		processes: map[string]*process{},
+		alarms:    map[string]*alarm{},
+		touched:   map[string]bool{},
+	}
+}
+
+// Names of the pieces a state is kept in.
+const (
+	planPiece     = "plan"
+	countersPiece = "counters"
+	processPiece  = "process/"
+	rulePiece     = "rule/"
+)
+
+// Pieces are the parts of the state that have changed since the last call, encoded, each
+// under its name. Restore makes the state of them again, bit for bit.
+func (s *State) Pieces() (map[string][]byte, error) {
+	pieces := map[string][]byte{}
+	for name := range s.touched {
+		var part any
+		switch {
+		case name == planPiece:
+			part = &s.plan
+		case name == countersPiece:
+			part = &s.counters
+		case strings.HasPrefix(name, processPiece):
+			p := s.processes[strings.TrimPrefix(name, processPiece)]
+			memory, err := p.memory.AppendBinary(nil)
+			if err != nil {
+				return nil, fmt.Errorf("state of %s: %w", name, err)
+			}
+			p.Memory = memory
+			part = p
+		default:
+			a, ok := s.alarms[strings.TrimPrefix(name, rulePiece)]
+			if !ok {
+				pieces[name] = nil
+				continue
+			}
+			part = a
+		}
+		text, err := json.Marshal(part)
+		if err != nil {
+			return nil, fmt.Errorf("state of %s: %w", name, err)
+		}
+		pieces[name] = text
+	}
+	clear(s.touched)
+	return pieces, nil
+}
+
+// Restore makes a state of its pieces. The error names the piece that can't be read.
+func Restore(pieces map[string][]byte) (*State, error) {
+	s := NewState()
+	for name, text := range pieces {
+		if err := s.restore(name, text); err != nil {
+			return nil, fmt.Errorf("saved state %q: %w", name, err)
+		}
+	}
+	ready, err := s.plan.compile()
+	if err != nil {
+		return nil, fmt.Errorf("saved plan: %w", err)
+	}
+	s.use(ready)
+	return s, nil
+}
+
+func (s *State) restore(name string, text []byte) error {
+	switch {
+	case name == planPiece:
+		return json.Unmarshal(text, &s.plan)
+	case name == countersPiece:
+		return json.Unmarshal(text, &s.counters)
+	case strings.HasPrefix(name, processPiece):
+		p := &process{}
+		if err := json.Unmarshal(text, p); err != nil {
+			return err
+		}
+		p.memory = posterior.NewMemory(p.Family, p.Remember)
+		if err := p.memory.UnmarshalBinary(p.Memory); err != nil {
+			return err
+		}
+		s.processes[strings.TrimPrefix(name, processPiece)] = p
+		return nil
+	case strings.HasPrefix(name, rulePiece):
+		a := &alarm{}
+		if err := json.Unmarshal(text, a); err != nil {
+			return err
+		}
+		s.alarms[strings.TrimPrefix(name, rulePiece)] = a
+		return nil
+	}
+	return fmt.Errorf("no piece of that name belongs to a state")
+}
+
+// use puts compiled rules in force.
+func (s *State) use(ready []weighed) {
+	s.ready = ready
+	clear(s.rulesOf)
+	for i, r := range ready {
+		for _, p := range r.claim.Processes {
+			s.rulesOf[p] = append(s.rulesOf[p], i)
+		}
+	}
+}
+
+// Apply makes the state what it is after the event and says what followed. An event that
+// can't be applied (it names a process, line or alarm that is not there) leaves the state as
+// it was; the error is a sentence for whoever caused the event.
+func (s *State) Apply(e *Event) (Outcomes, error) {
+	switch {
+	case e.Batch != nil:
+		return s.applyBatch(e)
+	case e.Adopted != nil:
+		return s.applyAdopted(e)
+	case e.Acknowledged != nil:
+		return s.applyAcknowledged(e)
+	case e.Segment != nil:
+		return s.applySegment(e)
+	case e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
+		return Outcomes{}, nil
+	}
+	return Outcomes{}, fmt.Errorf("event %d says nothing that the engine knows", e.Index)
+}
+
+func (s *State) applyBatch(e *Event) (Outcomes, error) {
+	for _, series := range e.Batch.Series {
+		p, ok := s.processes[series.Process]
+		if _, _, planned := s.plan.split(series.Process); !ok || !planned {
+			return Outcomes{}, fmt.Errorf("source %s, file %s: there is no process %q in the plan",
+				e.Batch.Source, e.Batch.File, series.Process)
+		}
+		for i, v := range series.Value {
+			if err := p.Family.Accepts(v, series.of(i)); err != nil {
+				return Outcomes{}, fmt.Errorf("source %s, file %s, line %d: %w",
+					e.Batch.Source, e.Batch.File, e.Batch.Rows.Line[series.Row[i]], err)
+			}
+		}
+	}
+	due := map[int]bool{}
+	for _, series := range e.Batch.Series {
+		s.take(e, &series)
+		for _, r := range s.rulesOf[series.Process] {
+			due[r] = true
+		}
+	}
+	var out Outcomes
+	for i := range s.ready {
+		if due[i] {
+			s.look(e, i, &out)
+		}
+	}
+	return out, nil
+}
+
+// of is the number looked at, or the exposure, of observation i.
+func (s *Series) of(i int) float64 {
+	if s.Of == nil {
+		return 1
+	}
+	return s.Of[i]
+}
+
+// take adds a series to what its process remembers.
+func (s *State) take(e *Event, series *Series) {
+	p := s.processes[series.Process]
+	times := make([]int64, len(series.Value))
+	for i, row := range series.Row {
+		times[i] = e.At.UnixNano()
+		if e.Batch.Rows.Time != nil {
+			times[i] = e.Batch.Rows.Time[row]
+		}
+	}
+	p.memory.AddBatch(series.Value, series.Of, times)
+	p.Taken += int64(len(series.Value))
+	p.LastTaken = e.At
+	if len(times) > 0 {
+		if last := time.Unix(0, slices.Max(times)).UTC(); last.After(p.LastMeasured) {
+			p.LastMeasured = last
+		}
+	}
+	s.touched[processPiece+series.Process] = true
+}
+
+func (s *State) applyAdopted(e *Event) (Outcomes, error) {
+	plan := e.Adopted.Plan
+	ready, err := plan.compile()
+	if err != nil {
+		return Outcomes{}, err
+	}
+	var out Outcomes
+	before := s.ready
+	s.plan = plan
+	s.touched[planPiece] = true
+	s.touched[countersPiece] = true
+	s.fitProcesses(&out)
+	s.use(ready)
+	versions := map[string]string{}
+	for _, r := range ready {
+		versions[r.Name] = r.version
+	}
+	for _, r := range before {
+		if a, ok := s.alarms[r.Name]; ok && versions[r.Name] != a.Version {
+			s.retire(e, r.Name, &out)
+		}
+	}
+	for i, r := range ready {
+		if _, ok := s.alarms[r.Name]; !ok {
+			s.alarms[r.Name] = &alarm{State: Normal, Version: r.version}
+			s.touched[rulePiece+r.Name] = true
+			s.look(e, i, &out)
+		}
+	}
+	return out, nil
+}
+
+// fitProcesses makes a process for each the plan has, and starts one anew whose family or
+// way of remembering has changed: what it held does not answer the new question.
+func (s *State) fitProcesses(out *Outcomes) {
+	for _, c := range s.plan.Characteristics {
+		for _, line := range c.Lines {
+			name := ProcessName(c.Name, line)
+			old, ok := s.processes[name]
+			if ok && old.Family == c.Family && old.Remember == c.Remember {
+				continue
+			}
+			p := &process{Family: c.Family, Remember: c.Remember}
+			p.memory = posterior.NewMemory(c.Family, c.Remember)
+			if ok {
+				p.Taken, p.Segment, p.LastMeasured, p.LastTaken = old.Taken, old.Segment+1, old.LastMeasured, old.LastTaken
+				out.Remarks = append(out.Remarks, fmt.Sprintf(
+					"%s: its family or what it remembers has changed, so its evidence starts anew", name))
+			}
+			s.processes[name] = p
+			s.touched[processPiece+name] = true
+		}
+	}
+}
+
+// retire ends the alarm of a rule that is gone or is no longer the same rule.
+func (s *State) retire(e *Event, name string, out *Outcomes) {
+	a := s.alarms[name]
+	if a.State != Normal {
+		s.step(e, name, Normal, Change{Cause: PlanChanged}, out)
+	}
+	delete(s.alarms, name)
+	s.touched[rulePiece+name] = true
+}
+
+func (s *State) applySegment(e *Event) (Outcomes, error) {
+	for _, name := range e.Segment.Processes {
+		if _, _, ok := s.plan.split(name); !ok {
+			return Outcomes{}, fmt.Errorf("there is no process %q in the plan", name)
+		}
+	}
+	var out Outcomes
+	due := map[int]bool{}
+	for _, name := range e.Segment.Processes {
+		p := s.processes[name]
+		p.memory.StartSegment()
+		p.Segment++
+		p.SegmentSince, p.SegmentNote = e.At, e.Segment.Note
+		s.touched[processPiece+name] = true
+		for _, r := range s.rulesOf[name] {
+			due[r] = true
+		}
+	}
+	for i, r := range s.ready {
+		if due[i] && s.alarms[r.Name].active() {
+			s.restart(e, r.Name, &out)
+		}
+	}
+	return out, nil
+}
+
+// active says whether the condition of the alarm stands.
+func (a *alarm) active() bool { return a.State == Unacknowledged || a.State == Acked }
+
+// restart returns an active alarm to normal because its evidence begins anew.
+func (s *State) restart(e *Event, rule string, out *Outcomes) {
+	to := Normal
+	if s.alarms[rule].State == Unacknowledged {
+		to = Returned
+	}
+	s.step(e, rule, to, Change{Cause: EvidenceRestart, Note: e.Segment.Note, By: e.Segment.By, How: e.Segment.How}, out)
+}
+
+func (s *State) applyAcknowledged(e *Event) (Outcomes, error) {
+	ack := e.Acknowledged
+	for _, r := range s.ready {
+		a := s.alarms[r.Name]
+		if a.Number != ack.Alarm || a.Number == 0 {
+			continue
+		}
+		var out Outcomes
+		change := Change{Cause: Answered, By: ack.By, How: ack.How, Note: ack.Note}
+		switch a.State {
+		case Unacknowledged:
+			s.step(e, r.Name, Acked, change, &out)
+		case Returned:
+			s.step(e, r.Name, Normal, change, &out)
+		default:
+			return Outcomes{}, fmt.Errorf("alarm A%d does not wait for an answer: it is %s", ack.Alarm, a.State)
+		}
+		return out, nil
+	}
+	if ack.Alarm > 0 && ack.Alarm <= s.counters.Alarms {
+		return Outcomes{}, fmt.Errorf("alarm A%d is over: its rule has raised again since, or is no longer in the plan", ack.Alarm)
+	}
+	return Outcomes{}, fmt.Errorf("there is no alarm A%d; %d have been raised so far", ack.Alarm, s.counters.Alarms)
+}
+
+// step moves the alarm of a rule to a state and records the change.
+func (s *State) step(e *Event, rule string, to AlarmState, c Change, out *Outcomes) {
+	a := s.alarms[rule]
+	a.Step++
+	c.Alarm, c.Step, c.Rule, c.Version = a.Number, a.Step, rule, a.Version
+	c.From, c.To, c.At = a.State, to, e.At
+	if e.Batch != nil {
+		c.Source, c.File = e.Batch.Source, e.Batch.File
+	}
+	a.State, a.Since = to, e.At
+	s.touched[rulePiece+rule] = true
+	out.Changes = append(out.Changes, c)
+}
+
+// look evaluates rule i and moves its alarm.
+func (s *State) look(e *Event, i int, out *Outcomes) {
+	r := &s.ready[i]
+	a := s.alarms[r.Name]
+	look := s.weigh(i)
+	a.Last, a.LastAt, a.LookedAt = &look, e.At, e.Index
+	s.touched[rulePiece+r.Name] = true
+	out.Looks = append(out.Looks, look)
+	if look.Withheld != "" {
+		return
+	}
+	p := look.Odds().Probability()
+	switch {
+	case p >= r.Raise && !a.active():
+		s.raise(e, i, look, out)
+	case p <= r.Clear && a.active():
+		to := Normal
+		if a.State == Unacknowledged {
+			to = Returned
+		}
+		s.step(e, r.Name, to, s.figures(i, look, Cleared), out)
+	}
+}
+
+// raise begins a new alarm of rule i, and ends the one before it if that was never answered.
+func (s *State) raise(e *Event, i int, look Look, out *Outcomes) {
+	name := s.ready[i].Name
+	if s.alarms[name].State == Returned {
+		s.step(e, name, Normal, Change{Cause: Replaced}, out)
+	}
+	s.counters.Alarms++
+	s.touched[countersPiece] = true
+	a := s.alarms[name]
+	a.Number, a.Step, a.Raised = s.counters.Alarms, 0, e.At
+	s.step(e, name, Unacknowledged, s.figures(i, look, Raised), out)
+}
+
+// figures are the numbers of a look that people are told.
+func (s *State) figures(i int, look Look, cause Cause) Change {
+	c := Change{Cause: cause, Look: &look}
+	r := &s.ready[i]
+	if q, err := evidence.Estimate(r.claim, s.believed(r.claim)); err == nil && finite(q.Median, q.Lower, q.Upper) {
+		c.Quantity = &q
+	}
+	for _, p := range r.claim.Processes {
+		c.Units = append(c.Units, Units{p, units(s.processes[p])})
+	}
+	return c
+}
+
+func finite(xs ...float64) bool {
+	for _, x := range xs {
+		if math.IsNaN(x) || math.IsInf(x, 0) {
+			return false
+		}
+	}
+	return true
+}
+
+// weigh evaluates rule i.
+func (s *State) weigh(i int) Look {
+	r := &s.ready[i]
+	for _, name := range r.claim.Processes {
+		if n, need := units(s.processes[name]), r.needs(name); n < need {
+			return Look{Rule: i, Withheld: fmt.Sprintf("%s has %s of the %s units the rule waits for",
+				name, number(n), number(need))}
+		}
+	}
+	odds, err := evidence.Weigh(r.claim, s.believed(r.claim))
+	if err != nil {
+		return Look{Rule: i, Withheld: err.Error()}
+	}
+	return Look{Rule: i, LogFor: max(odds.LogFor, LogZero), LogAgainst: max(odds.LogAgainst, LogZero)}
+}
+
+// units is how many units a process's evidence rests on; fractional under a discount.
+func units(p *process) float64 {
+	sums := p.memory.Sums()
+	if p.Family == posterior.BinomialFamily {
+		return sums.Exposure
+	}
+	return sums.N
+}
+
+// believed fills the scratch slice with what a claim's processes are believed to be.
+func (s *State) believed(c *claim.Claim) []evidence.Process {
+	s.scratch = s.scratch[:0]
+	for _, name := range c.Processes {
+		s.scratch = append(s.scratch, s.belief(name))
+	}
+	return s.scratch
+}
+
+func (s *State) belief(name string) evidence.Process {
+	c, _, _ := s.plan.split(name)
+	lower, upper := c.Limits()
+	post := c.Prior.Posterior(c.Family, s.processes[name].memory.Sums())
+	return evidence.Process{Posterior: post, Lower: lower, Upper: upper}
+}
