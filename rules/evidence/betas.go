@@ -2,17 +2,67 @@ package evidence
 
 import "math"
 
-func certain(claim bool) Odds {
-	if claim {
-		return Odds{LogFor: 0, LogAgainst: math.Inf(-1)}
+// betaOdds is the odds of X > x for X ~ Beta(a, b): one incomplete beta function, the rarer side by
+// a positive expansion (law). x beyond (0, 1) is certain either way.
+// TestPublicCases, TestPublished, TestLawTails.
+func betaOdds(a, b, x float64) Odds {
+	if x <= 0 || x >= 1 {
+		return certain(x <= 0)
 	}
-	return Odds{LogFor: math.Inf(-1), LogAgainst: 0}
+	l := betaLaw(a, b)
+	q := 1 - x
+	below, above := l.logTailsLow(x, q, (1-q)-x)
+	return Odds{LogFor: above, LogAgainst: below}
 }
 
-var unweighed = Odds{LogFor: math.NaN(), LogAgainst: math.NaN()}
+// betaWindowOdds is the odds of lo < X < hi for X ~ Beta(a, b).
+func betaWindowOdds(a, b, lo, hi float64) Odds {
+	l := betaLaw(a, b)
+	return l.windowOdds(lo, hi, 1)
+}
 
-func betaOdds(a, b, x float64) Odds                                      { return unweighed }
-func betaLineOdds(a1, b1, a2, b2, slope, offset float64) Odds            { return unweighed }
-func betaLargestOdds(a, b []float64, which int, tolerance float64) Odds  { return unweighed }
-func betaSmallestOdds(a, b []float64, which int, tolerance float64) Odds { return unweighed }
-func betaWindowOdds(a, b, lo, hi float64) Odds                           { return unweighed }
+// betaLineOdds is the odds of X1 > slope X2 + offset for independent X1 ~ Beta(a1, b1) and
+// X2 ~ Beta(a2, b2): the integral of the narrower one's density times the other's tail over the
+// stretch where that tail is neither 0 nor 1, in the log-odds of the place in the stretch,
+// where nothing is singular nearer than pi to the real line (logIntegral). Each side positive.
+// Any slope and offset. TestPublicCases, TestSweepPairs.
+func betaLineOdds(a1, b1, a2, b2, slope, offset float64) Odds {
+	if slope == 0 {
+		return betaOdds(a1, b1, offset)
+	}
+	one, two := betaLaw(a1, b1), betaLaw(a2, b2)
+	mean1, mean2 := a1/one.n, a2/two.n
+	sd1 := math.Sqrt(mean1 * (b1 / one.n) / (one.n + 1))
+	sd2 := math.Sqrt(mean2 * (b2 / two.n) / (two.n + 1))
+	return lineOdds(&one, &two, 1, 1, slope, offset, mean1, mean2, sd1, sd2, 1)
+}
+
+// lineOdds chooses the narrower law for the density and the rarer side for the integral.
+func lineOdds(one, two *law, rate1, rate2, slope, offset, mean1, mean2, sd1, sd2, top float64) Odds {
+	rare := mean1 < float64(slope*mean2)+offset
+	if sd1 < math.Abs(slope)*sd2 {
+		// X1's density; the claim is X2 < (X1-offset)/slope, or > for a falling line.
+		p := pair{x: one, z: two, rateX: rate1, rateZ: rate2, slope: 1 / slope, offset: -offset / slope,
+			top: top, claimAbove: slope < 0}
+		return p.odds(rare)
+	}
+	p := pair{x: two, z: one, rateX: rate2, rateZ: rate1, slope: slope, offset: offset, top: top, claimAbove: true}
+	return p.odds(rare)
+}
+
+// betaLargestOdds is the odds of X_which - max of the others > tolerance, X_i ~ Beta(a[i], b[i])
+// independent (contest). TestPublicCases, TestLargestSums.
+func betaLargestOdds(a, b []float64, which int, tolerance float64) Odds {
+	var c contest
+	for i := range a {
+		c.laws[i], c.rates[i] = betaLaw(a[i], b[i]), 1
+	}
+	c.n, c.which, c.tolerance, c.top = len(a), which, tolerance, 1
+	return c.odds()
+}
+
+// betaSmallestOdds is the odds of X_which - min of the others > tolerance: in 1-X the contrary of
+// max of the others - X_which < ... with the tolerance's sign turned.
+func betaSmallestOdds(a, b []float64, which int, tolerance float64) Odds {
+	return betaLargestOdds(b, a, which, -tolerance).against()
+}

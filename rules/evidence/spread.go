@@ -1,6 +1,268 @@
 package evidence
 
-func sdOdds(ss, nu, x float64) Odds                  { return unweighed }
-func sdRatioOdds(ss1, nu1, ss2, nu2, r float64) Odds { return unweighed }
-func outsideOdds(p *Process, fraction float64) Odds  { return unweighed }
-func capabilityOdds(p *Process, c float64) Odds      { return unweighed }
+import (
+	"math"
+
+	"steelyard/rules/posterior"
+)
+
+// sdOdds is the odds of sigma > x, SS/sigma^2 ~ chi-squared(nu): a gamma tail. TestPublished.
+func sdOdds(ss, nu, x float64) Odds {
+	switch {
+	case x < 0 || x == 0 && ss > 0:
+		return certain(true)
+	case ss == 0 || math.IsInf(x, 1):
+		return certain(false)
+	}
+	// In the variable t = SS/(2 x^2) ~ Gamma(nu/2), sigma > x is below t.
+	root := math.Sqrt(ss) / x
+	return gammaOdds(nu/2, 1, 0.5*float64(root*root)).against()
+}
+
+// sdRatioOdds is the odds of sigma1/sigma2 > r: chi2/(chi1+chi2) ~ Beta(nu2/2, nu1/2), one
+// incomplete beta function. TestPublicCases, TestPublished, TestSweepRatios.
+func sdRatioOdds(ss1, nu1, ss2, nu2, r float64) Odds {
+	switch {
+	case r < 0 || r == 0 && ss1 > 0 || ss2 == 0 && ss1 > 0 && !math.IsInf(r, 1):
+		return certain(true)
+	case ss1 == 0 || math.IsInf(r, 1):
+		return certain(false)
+	}
+	rr := r * r
+	w := rr * ss2
+	low := math.FMA(rr, ss2, -w) + float64(math.FMA(r, r, -rr)*ss2)
+	return betaRatioOddsLow(nu2/2, nu1/2, w, low, ss1)
+}
+
+// A spreadCurve is the edge of a claim about mean and spread, in units that make one picture of
+// all: s = H/sigma, H half the distance of the limits (1 where there is one). The claim is
+//
+//	s dU - v > m and s dL - v > -m,  m ~ N(0, 1/K) independent of s,  dU = (U-M)/H, dL = (M-L)/H,
+//
+// with v = 3c for capability > c; for fraction outside < f, v = z_f with one limit, and with two the
+// v(rho) that solves Q(v) + Q(v + 2 rho) = f, rho = s - v being the half-width left to the mean in
+// sigmas. x = SS/(2 sigma^2) = kappa s^2 ~ Gamma(nu/2).
+//
+// With two limits the integral is taken over u = log rho, not over sigma: s(rho) is analytic (it solves
+// ds/drho = tanh(rho s), s(0) = z_{f/2}), while rho(s) ends in a square root.
+type spreadCurve struct {
+	law          law
+	kappa        float64
+	rootK        float64
+	upper, lower float64 // dU, dL; +Inf where there is no limit
+	// The edge.
+	fraction    float64 // 0 for capability
+	logFraction float64
+	v           float64 // 3c; z_f
+	hazard      float64 // phi(z_f)/Q(z_f)
+	s0          float64 // s where rho = 0: 3c or z_{f/2}; 0 where s starts at 0 (one limit, c <= 0)
+}
+
+// newSpreadCurve places the process in the units of spreadCurve; logarithms of limits for lognormal.
+func newSpreadCurve(p *Process) spreadCurve {
+	upper, upperLow, lower, lowerLow := p.Upper, 0.0, p.Lower, 0.0
+	if p.Family == posterior.LognormalFamily {
+		upper, upperLow = logPair(p.Upper)
+		lower, lowerLow = logPair(p.Lower)
+	}
+	h := 1.0
+	two := !math.IsInf(upper, 1) && !math.IsInf(lower, -1)
+	if two {
+		h = 0.5 * ((upper - lower) + (upperLow - lowerLow))
+	} else {
+		h = math.Sqrt(p.SS / p.Nu)
+	}
+	root := math.Sqrt(0.5*p.SS) / h
+	return spreadCurve{law: gammaLaw(p.Nu / 2), kappa: root * root, rootK: math.Sqrt(p.K),
+		upper: distance(upper, upperLow, p.M, p.MLow) / h, lower: distance(p.M, p.MLow, lower, lowerLow) / h}
+}
+
+// distance is (a + aLow) - (b + bLow).
+func distance(a, aLow, b, bLow float64) float64 {
+	d := a - b
+	if math.IsInf(d, 0) {
+		return d
+	}
+	bb := a - d
+	rounding := (a - (d + bb)) + (bb - b)
+	return d + (rounding + (aLow - bLow))
+}
+
+// logPair is log x as a value and what it could not hold, to about 1e-18; -Inf for x <= 0.
+func logPair(x float64) (hi, lo float64) {
+	if !(x > 0) || math.IsInf(x, 1) {
+		if x > 0 {
+			return x, 0
+		}
+		return math.Inf(-1), 0
+	}
+	m, k := math.Frexp(x)
+	if m < math.Sqrt2/2 {
+		m *= 2
+		k--
+	}
+	// log m = 2 atanh(u), u = (m-1)/(m+1), the leading term as a pair; m-1 is exact.
+	const ln2Hi, ln2Lo = 0x1.62e42fefa38p-1, 0x1.ef35793c7673p-45
+	den := m + 1
+	denLow := (1 - den) + m
+	u := (m - 1) / den
+	uLow := (math.FMA(-u, den, m-1) - float64(u*denLow)) / den
+	v := u * u
+	series := 2 * u * v * polynomial(devianceSeries[:], v)
+	a, b := float64(k)*ln2Hi, 2*u
+	hi = a + b
+	bb := hi - a
+	lo = (a - (hi - bb)) + (b - bb) + (float64(float64(k)*ln2Lo) + (2*uLow + series))
+	sum := hi + lo
+	return sum, (hi - sum) + lo
+}
+
+func (s *spreadCurve) two() bool { return !math.IsInf(s.upper, 1) && !math.IsInf(s.lower, 1) }
+
+// at is s, v and log(2 dlog s/du) at the coordinate u: log rho, or log s where s starts at 0.
+func (c *spreadCurve) at(u float64) (s, v, logRate float64) {
+	e := math.Exp(u)
+	if c.s0 == 0 {
+		return e, c.v, math.Ln2
+	}
+	if c.fraction == 0 {
+		return c.v + e, c.v, math.Ln2 + u - math.Log(c.v+e)
+	}
+	s, rate := c.solve(e)
+	return s, s - e, math.Ln2 + u + math.Log(rate/s)
+}
+
+// solve is s(rho) and ds/drho = tanh(rho s): Newton's method on log(Q(v)+Q(v+2rho)) = log f.
+func (c *spreadCurve) solve(rho float64) (s, rate float64) {
+	v := c.v
+	r := math.Exp(-2 * rho * (v + rho))
+	if r < 1e-18 && v+rho > 0 {
+		return v + rho, 1
+	}
+	v = math.Min(v+math.Log1p(r)/c.hazard, c.s0)
+	for range 30 {
+		r = math.Exp(-2 * rho * math.Max(v+rho, 0))
+		step := 0.0
+		if v > 0 {
+			m := mills(v) + float64(r*mills(v+2*rho))
+			step = (math.Log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
+		} else {
+			q := normalTail(v) + normalTail(v+2*rho)
+			step = (math.Log(q) - c.logFraction) * q / (normalDensity(v) * (1 + r))
+		}
+		v += step
+		if math.Abs(step) <= 1e-9*(0.01+math.Abs(v)) {
+			break
+		}
+	}
+	s = v + rho
+	r = math.Exp(-2 * rho * s)
+	return s, -math.Expm1(-2*rho*s) / (1 + r)
+}
+
+// logAt is the logarithm of the integrand: the law of s times the probability that the mean is inside the edge,
+// or outside it, given s.
+func (c *spreadCurve) logAt(kind integrandKind, u float64) float64 {
+	s, v, logRate := c.at(u)
+	f := c.law.logDensity(c.kappa*float64(s*s), 0) + logRate
+	up, low := c.rootK*(float64(s*c.upper)-v), c.rootK*(float64(s*c.lower)-v)
+	switch {
+	case kind == inside && math.IsInf(low, 1):
+		return f + logNormalTail(-up)
+	case kind == inside && math.IsInf(up, 1):
+		return f + logNormalTail(-low)
+	case kind == inside:
+		return f + logNormalWindow(-low, up)
+	}
+	return f + logSum(logNormalTail(up), logNormalTail(low))
+}
+
+// logProbability is log P(claim) (inside) or of its contrary; for s below s0 nothing is inside.
+func (c *spreadCurve) logProbability(kind integrandKind) float64 {
+	outer := math.Inf(-1)
+	if c.s0 > 0 && kind == beyond {
+		outer, _ = c.law.logTails(c.kappa*float64(c.s0*c.s0), 0)
+	}
+	g := integrand{kind: kind, spread: c}
+	width := math.Min(1, math.Sqrt(0.5/c.law.a))
+	s := math.Sqrt(c.law.a / c.kappa)
+	if c.s0 == 0 {
+		return g.logIntegral(math.Log(s), width)
+	}
+	rho := math.Max(s-c.v, 0.5*math.Min(1, 1/c.rootK))
+	width = math.Min(1, width*s/rho)
+	return logSum(outer, g.logIntegral(math.Log(rho), width))
+}
+
+func (c *spreadCurve) odds(claimRare bool) Odds {
+	kind, other := beyond, inside
+	if claimRare {
+		kind, other = inside, beyond
+	}
+	o := oddsOf(c.logProbability(kind))
+	if o.LogFor > -0.5 {
+		o.LogAgainst = math.Min(c.logProbability(other), 0)
+	}
+	if !claimRare {
+		return o.against()
+	}
+	return o
+}
+
+// outsideOdds is the odds of F < fraction, F = Phi((L-mu)/sigma) + Phi((mu-U)/sigma) the part of the process
+// beyond its limits; for lognormal of the logarithms. One limit: an integral over log sigma (the
+// noncentral t law in a form that keeps both tails); two: spreadCurve. TestPublicCases,
+// TestTolerance, TestSweepSpread.
+func outsideOdds(p *Process, fraction float64) Odds {
+	if !(fraction > 0) || fraction >= 1 {
+		return certain(fraction >= 1)
+	}
+	c := newSpreadCurve(p)
+	if o, ok := c.degenerate(p); ok {
+		return o
+	}
+	c.fraction, c.logFraction = fraction, math.Log(fraction)
+	c.v = normalQuantile(fraction, 1-fraction)
+	c.hazard = normalDensity(c.v) / fraction
+	s := math.Sqrt(c.law.a / c.kappa)
+	if !c.two() {
+		return c.odds(s*math.Min(c.upper, c.lower) < c.v)
+	}
+	if c.s0 = normalCentre(0.5 * (1 - fraction)); fraction < 0.6 {
+		c.s0 = normalQuantile(0.5*fraction, 1-0.5*fraction)
+	}
+	return c.odds(normalTail(s*c.upper)+normalTail(s*c.lower) >= fraction)
+}
+
+// capabilityOdds is the odds of min((U-mu)/(3 sigma), (mu-L)/(3 sigma)) > c for any c. TestPublicCases,
+// TestSweepSpread.
+func capabilityOdds(p *Process, c float64) Odds {
+	if math.IsInf(c, 0) {
+		return certain(c < 0)
+	}
+	k := newSpreadCurve(p)
+	if o, ok := k.degenerate(p); ok {
+		return o
+	}
+	k.v = 3 * c
+	if k.two() && c > 0 {
+		k.s0 = k.v
+	}
+	s := math.Sqrt(k.law.a / k.kappa)
+	return k.odds(s*math.Min(k.upper, k.lower) < k.v)
+}
+
+// degenerate answers where there is no limit, or no spread: then the mean is known too, and is inside
+// or not.
+func (c *spreadCurve) degenerate(p *Process) (Odds, bool) {
+	if math.IsInf(c.upper, 1) && math.IsInf(c.lower, 1) {
+		return certain(true), true
+	}
+	if math.IsInf(c.upper, -1) || math.IsInf(c.lower, -1) {
+		return certain(false), true
+	}
+	if p.SS > 0 {
+		return Odds{}, false
+	}
+	return certain(c.upper > 0 && c.lower > 0), true
+}

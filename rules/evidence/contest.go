@@ -1,0 +1,187 @@
+package evidence
+
+import "math"
+
+// largestGroup is the most processes a claim of the largest or smallest may have.
+const largestGroup = 64
+
+// A contest is X_which against the largest of the others: the event X_which - max > tolerance. With
+// smallest it is the event X_which - min < tolerance instead.
+//
+//	P(event) = int f_w(x) prod_j F_j(x - tolerance) dx,
+//	P(contrary) = int F_w(z + tolerance) sum_j f_j(z) prod_{i != w,j} F_i(z) dz,
+//
+// F the tails below (above for smallest), each integrand positive and with one peak.
+type contest struct {
+	laws      [largestGroup]law
+	rates     [largestGroup]float64
+	n, which  int
+	tolerance float64
+	top       float64 // of the support: 1 or infinity
+	smallest  bool
+	span      span // of x for the event, of z for the contrary
+}
+
+// odds weighs the event, and its contrary too where the event is not the rarer.
+func (c *contest) odds() Odds {
+	logFor := math.Min(c.logEvent(), 0)
+	if logFor < -0.5 {
+		return oddsOf(logFor)
+	}
+	return Odds{LogFor: logFor, LogAgainst: math.Min(c.logContrary(), 0)}
+}
+
+// logEvent is log P(event). Where x-tolerance is beyond the support the product is 0 or 1.
+func (c *contest) logEvent() float64 {
+	w := &c.laws[c.which]
+	lo, hi := math.Max(0, c.tolerance), math.Min(c.top, c.top+c.tolerance)
+	outer := math.Inf(-1)
+	if c.smallest {
+		// All the others are above x-tolerance for certain where that is below 0.
+		if c.tolerance > 0 {
+			outer, _ = c.logTails(c.which, c.tolerance)
+		}
+	} else if hi < c.top {
+		_, outer = c.logTails(c.which, hi)
+	}
+	if lo >= hi {
+		return outer
+	}
+	c.lay(lo, hi, -c.tolerance)
+	g := integrand{kind: winner, many: c}
+	mean := w.a / c.rates[c.which]
+	if !w.gamma {
+		mean = w.a / w.n
+	}
+	return logSum(outer, g.logIntegral(c.span.coordinate(mean), c.step()))
+}
+
+// logContrary is log P(contrary).
+func (c *contest) logContrary() float64 {
+	lo, hi := math.Max(0, -c.tolerance), math.Min(c.top, c.top-c.tolerance)
+	outer := math.Inf(-1)
+	if c.smallest {
+		// X_which is above z+tolerance for certain where that is below 0: the smallest is there.
+		if lo > 0 {
+			outer = c.logSomeBeyond(lo)
+		}
+	} else if hi < c.top {
+		outer = c.logSomeBeyond(hi)
+	}
+	if lo >= hi {
+		return outer
+	}
+	c.lay(lo, hi, c.tolerance)
+	g := integrand{kind: challengers, many: c}
+	mean := 0.0
+	for j := range c.n {
+		if j != c.which {
+			m := c.mean(j)
+			if mean == 0 || (m > mean) != c.smallest {
+				mean = m
+			}
+		}
+	}
+	return logSum(outer, g.logIntegral(c.span.coordinate(mean), c.step()))
+}
+
+func (c *contest) mean(j int) float64 {
+	l := &c.laws[j]
+	if l.gamma {
+		return l.a / c.rates[j]
+	}
+	return l.a / l.n
+}
+
+// logSomeBeyond is the logarithm of the probability that some other is on the far side of x.
+func (c *contest) logSomeBeyond(x float64) float64 {
+	if x >= c.top {
+		if c.smallest {
+			return 0
+		}
+		return math.Inf(-1)
+	}
+	none := 0.0
+	for j := range c.n {
+		if j == c.which {
+			continue
+		}
+		below, above := c.logTails(j, x)
+		if c.smallest {
+			below = above
+		}
+		none += below
+	}
+	return log1mexp(none)
+}
+
+// lay prepares the span (lo, hi) with z = x + shift.
+func (c *contest) lay(lo, hi, shift float64) {
+	c.span = span{lo: lo, width: hi - lo, x0: lo, q1: 1 - hi, slope: 1, beta: !c.laws[0].gamma}
+	c.span.z0 = math.Max(lo+shift, 0)
+	c.span.w1 = math.Max((1-hi)-shift, 0)
+	if hi < 1 {
+		c.span.w1 = 0
+	}
+	if lo > 0 {
+		c.span.z0 = 0
+	}
+}
+
+// step is the width in which the peak is sought: the narrowest law's, in logits or logarithms.
+func (c *contest) step() float64 {
+	s := 1.0
+	for i := range c.n {
+		l := &c.laws[i]
+		s = math.Min(s, math.Sqrt(1/l.a+1/l.b))
+	}
+	return s
+}
+
+func (c *contest) logTails(j int, x float64) (below, above float64) {
+	return c.laws[j].logTails(x*c.rates[j], 1-x)
+}
+
+// logWinner is the logarithm of f_w(x) prod_j F_j(z) dx/du.
+func (c *contest) logWinner(u float64) float64 {
+	x, q, z, w, logRate := c.span.at(u)
+	s := c.laws[c.which].logDensity(x*c.rates[c.which], q) + logRate - c.logMeasure(x, q)
+	for j := range c.n {
+		if j != c.which {
+			s += c.logTail(j, z, w)
+		}
+	}
+	return s
+}
+
+// logMeasure is log(x(1-x)), or log x for gamma: what turns a density of the logit into one of x.
+func (c *contest) logMeasure(x, q float64) float64 {
+	if c.span.beta {
+		return math.Log(x * q)
+	}
+	return math.Log(x)
+}
+
+func (c *contest) logTail(j int, x, q float64) float64 {
+	below, above := c.laws[j].logTails(x*c.rates[j], q)
+	if c.smallest {
+		return above
+	}
+	return below
+}
+
+// logChallengers is the logarithm of F_w(x) sum_j f_j(z) prod F_i(z) dz/du; the span's x is z here.
+func (c *contest) logChallengers(u float64) float64 {
+	z, q, x, w, logRate := c.span.at(u)
+	product := c.logTail(c.which, x, w) + logRate - c.logMeasure(z, q)
+	sum := math.Inf(-1)
+	for j := range c.n {
+		if j == c.which {
+			continue
+		}
+		tail := c.logTail(j, z, q)
+		product += tail
+		sum = logSum(sum, c.laws[j].logDensity(z*c.rates[j], q)-tail)
+	}
+	return product + sum
+}
