@@ -42,7 +42,7 @@ func lineOdds(one, two *law, rate1, rate2, slope, offset, mean1, mean2, sd1, sd2
 	rare := mean1 < float64(slope*mean2)+offset
 	if sd1 < math.Abs(slope)*sd2 {
 		// X1's density; the claim is X2 < (X1-offset)/slope, or > for a falling line.
-		p := pair{x: one, z: two, rateX: rate1, rateZ: rate2, slope: 1 / slope, offset: -offset / slope,
+		p := pair{x: one, z: two, rateX: rate1, rateZ: rate2, slope: slope, offset: offset, inverse: true,
 			top: top, claimAbove: slope < 0}
 		return p.odds(rare)
 	}

@@ -24,6 +24,10 @@ type contest struct {
 
 // odds weighs the event, and its contrary too where the event is not the rarer.
 func (c *contest) odds() Odds {
+	// A difference of two such quantities is between -top and top.
+	if math.Abs(c.tolerance) >= c.top {
+		return certain((c.tolerance < 0) != c.smallest)
+	}
 	logFor := math.Min(c.logEvent(), 0)
 	if logFor < -0.5 {
 		return oddsOf(logFor)
@@ -33,7 +37,6 @@ func (c *contest) odds() Odds {
 
 // logEvent is log P(event). Where x-tolerance is beyond the support the product is 0 or 1.
 func (c *contest) logEvent() float64 {
-	w := &c.laws[c.which]
 	lo, hi := math.Max(0, c.tolerance), math.Min(c.top, c.top+c.tolerance)
 	outer := math.Inf(-1)
 	if c.smallest {
@@ -49,11 +52,8 @@ func (c *contest) logEvent() float64 {
 	}
 	c.lay(lo, hi, -c.tolerance)
 	g := integrand{kind: winner, many: c}
-	mean := w.a / c.rates[c.which]
-	if !w.gamma {
-		mean = w.a / w.n
-	}
-	return logSum(outer, g.logIntegral(c.span.coordinate(mean), c.step()))
+	g.leftRate, g.rightRate = c.falls()
+	return logSum(outer, g.logIntegral(c.span.coordinate(c.mean(c.which)), c.step()))
 }
 
 // logContrary is log P(contrary).
@@ -73,11 +73,12 @@ func (c *contest) logContrary() float64 {
 	}
 	c.lay(lo, hi, c.tolerance)
 	g := integrand{kind: challengers, many: c}
-	mean := 0.0
+	g.leftRate, g.rightRate = c.falls()
+	mean := place{-1, 0}
 	for j := range c.n {
 		if j != c.which {
 			m := c.mean(j)
-			if mean == 0 || (m > mean) != c.smallest {
+			if mean.x < 0 || (m.x > mean.x) != c.smallest {
 				mean = m
 			}
 		}
@@ -85,12 +86,12 @@ func (c *contest) logContrary() float64 {
 	return logSum(outer, g.logIntegral(c.span.coordinate(mean), c.step()))
 }
 
-func (c *contest) mean(j int) float64 {
+func (c *contest) mean(j int) place {
 	l := &c.laws[j]
 	if l.gamma {
-		return l.a / c.rates[j]
+		return place{l.a / c.rates[j], 0}
 	}
-	return l.a / l.n
+	return place{l.a / l.n, l.b / l.n}
 }
 
 // logSomeBeyond is the logarithm of the probability that some other is on the far side of x.
@@ -117,7 +118,7 @@ func (c *contest) logSomeBeyond(x float64) float64 {
 
 // lay prepares the span (lo, hi) with z = x + shift.
 func (c *contest) lay(lo, hi, shift float64) {
-	c.span = span{lo: lo, width: hi - lo, x0: lo, q1: 1 - hi, slope: 1, beta: !c.laws[0].gamma}
+	c.span = span{lo: lo, width: hi - lo, loQ: 1 - lo, x0: lo, q1: math.Max(1-hi, 0), slope: 1, beta: !c.laws[0].gamma}
 	c.span.z0 = math.Max(lo+shift, 0)
 	c.span.w1 = math.Max((1-hi)-shift, 0)
 	if hi < 1 {
@@ -136,6 +137,24 @@ func (c *contest) step() float64 {
 		s = math.Min(s, math.Sqrt(1/l.a+1/l.b))
 	}
 	return s
+}
+
+// falls is the least rate at which the integrand falls off at the span's ends.
+func (c *contest) falls() (left, right float64) {
+	left, right = 1, 1
+	if c.span.lo == 0 {
+		left = math.Inf(1)
+		for i := range c.n {
+			left = math.Min(left, c.laws[i].a)
+		}
+	}
+	if c.span.q1 == 0 {
+		right = math.Inf(1)
+		for i := range c.n {
+			right = math.Min(right, c.laws[i].b)
+		}
+	}
+	return left, right
 }
 
 func (c *contest) logTails(j int, x float64) (below, above float64) {

@@ -18,6 +18,13 @@ type integrand struct {
 
 	// Spread.
 	spread *spreadCurve
+
+	// How the integrand falls off: at the least as exp(leftRate u) and exp(-rightRate u).
+	leftRate, rightRate float64
+
+	// Where there are two peaks.
+	twoPeaks bool    // there is a second peak,
+	through  float64 // about here, that the sum has to reach
 }
 
 type integrandKind int
@@ -54,14 +61,23 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 	if math.IsInf(top, -1) || math.IsNaN(top) {
 		return top
 	}
-	h := scale
-	sum, left, right := g.sweep(peak, top, h)
+	m := mapping{at: peak, top: top}
+	if g.leftRate < slowRate {
+		m.left = 1
+	}
+	if g.rightRate < slowRate {
+		m.right = 1
+	}
+	h := 0.8 * scale / (1 + m.left + m.right)
+	sum, left, right := g.sweep(&m, h)
+	// Where the logarithms are large, their rounding shows.
+	enough := agreement + 1e-15*math.Abs(top)
 	for range maxHalvings {
 		odd := 0.0
 		for k := -left; k < right; k++ {
-			odd += math.Exp(g.logAt(peak+float64((k+0.5)*h)) - top)
+			odd += g.term(&m, float64((k+0.5)*h))
 		}
-		settled := math.Abs(odd-sum) <= agreement*(odd+sum)
+		settled := math.Abs(odd-sum) <= enough*(odd+sum)
 		sum += odd
 		h *= 0.5
 		left, right = 2*left, 2*right
@@ -73,20 +89,41 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 }
 
 const (
-	agreement   = 1e-8
-	maxHalvings = 12
+	agreement   = 1e-12
+	maxHalvings = 10
 	negligible  = 1e-18
+	slowRate    = 4
 )
 
-// sweep sums the integrand over e^top at peak + k h, outwards on both sides until it is negligible.
-func (g *integrand) sweep(peak, top, h float64) (sum, left, right float64) {
-	sum = math.Exp(g.logAt(peak) - top)
+// A mapping is u = at + t + left (1 - e^-t) + right (e^t - 1): where the integrand falls off slowly, the sum
+// runs out double-exponentially instead (Takahasi & Mori, 1974).
+type mapping struct{ at, top, left, right float64 }
+
+// term is the integrand at t over e^top, du/dt included.
+func (g *integrand) term(m *mapping, t float64) float64 {
+	u, rate := t, 1.0
+	if m.left != 0 {
+		e := math.Exp(-t)
+		u += 1 - e
+		rate += e
+	}
+	if m.right != 0 {
+		e := math.Exp(t)
+		u += e - 1
+		rate += e
+	}
+	return rate * math.Exp(g.logAt(m.at+u)-m.top)
+}
+
+// sweep sums the terms at k h, outwards on both sides until they are negligible.
+func (g *integrand) sweep(m *mapping, h float64) (sum, left, right float64) {
+	sum = g.term(m, 0)
 	for _, sign := range [2]float64{-1, 1} {
 		k := 1.0
 		for before := math.Inf(1); k < 4000; k++ {
-			term := math.Exp(g.logAt(peak+sign*float64(k*h)) - top)
+			term := g.term(m, sign*float64(k*h))
 			sum += term
-			if term <= negligible*sum && term <= before {
+			if term <= negligible*sum && term <= before && !(g.twoPeaks && (g.through-m.at)*sign > float64(k*h)) {
 				break
 			}
 			before = term

@@ -8,6 +8,7 @@ import "math"
 // either variable. An infinite width stands for (lo, infinity), for gamma laws.
 type span struct {
 	lo, width float64
+	loQ       float64 // 1-lo
 	x0, q1    float64 // x at lo; 1-x at hi
 	z0, w1    float64 // the smaller of z at the two ends; the smaller of 1-z at the two ends
 	slope     float64 // dz/dx
@@ -40,14 +41,29 @@ func (s *span) at(u float64) (x, q, z, w, logRate float64) {
 	return x, q, z, w, math.Log(p * r / s.width)
 }
 
-// coordinate is u at x, kept off the ends.
-func (s *span) coordinate(x float64) float64 {
-	p := x - s.lo
+// coordinate is u at a place, kept off the ends.
+func (s *span) coordinate(at place) float64 {
+	p := at.x - s.lo
 	if math.IsInf(s.width, 1) {
-		return math.Log(math.Max(p, 1e-3*x+1e-300))
+		return math.Log(math.Max(p, 1e-3*at.x+1e-300))
 	}
-	t := math.Min(math.Max(p/s.width, 1e-6), 1-1e-6)
-	return math.Log(t / (1 - t))
+	if s.beta && s.lo > 0.5 {
+		p = s.loQ - at.q
+	}
+	t := p / s.width
+	if t > 0 && t < 0.5 {
+		return math.Log(t)
+	}
+	if t >= 0.5 && t < 1 {
+		r := s.width - p
+		if s.beta && s.lo <= 0.5 {
+			r = at.q - s.q1
+		}
+		if r > 0 {
+			return -math.Log(r / s.width)
+		}
+	}
+	return math.Copysign(14, t-0.5)
 }
 
 // logDensityTimesTail is the logarithm of f_X(x) P(Z > z) (or < z) dx/du.
@@ -66,18 +82,49 @@ func (g *integrand) logDensityTimesTail(u float64) float64 {
 	return g.density.logDensity(x*s.rateX, q) + logRate + below
 }
 
-// A pair is X > slope Z + offset or its like to be weighed: the law of x, of z, and the line
-// z = slope x + offset between them; claimAbove tells whether the claim is Z > that line.
+// A pair is the law of x, the law of z and the line between them: z = slope x + offset, or with inverse
+// z = (x - offset)/slope, so that the claim's own numbers are used either way and not rounded
+// quotients. claimAbove tells whether the claim is Z > that line.
 type pair struct {
 	x, z          *law
 	rateX, rateZ  float64
 	slope, offset float64
+	inverse       bool
 	top           float64 // of both supports: 1 or infinity
 	claimAbove    bool
 }
 
-// odds weighs P(Z > slope X + offset) (or <) by the side that a normal guess says is the rarer, and by
-// the other side too where the guess was wrong.
+// place is a point of (0, 1) by its distances from both ends.
+type place struct{ x, q float64 }
+
+// sum3 is a + b + c with one rounding in all but rare cases.
+func sum3(a, b, c float64) float64 {
+	s := a + b
+	t := s - a
+	low := (a - (s - t)) + (b - t)
+	return (s + c) + low
+}
+
+// crossings is where the line meets 0 and 1.
+func (p *pair) crossings() (zero, one place) {
+	s, o := p.slope, p.offset
+	if p.inverse {
+		return place{o, 1 - o}, place{s + o, sum3(1, -s, -o)}
+	}
+	return place{-o / s, (s + o) / s}, place{(1 - o) / s, sum3(s, -1, o) / s}
+}
+
+// ends is the line at 0 and at 1.
+func (p *pair) ends() (at0, at1 place) {
+	s, o := p.slope, p.offset
+	if p.inverse {
+		return place{-o / s, (s + o) / s}, place{(1 - o) / s, sum3(s, -1, o) / s}
+	}
+	return place{o, 1 - o}, place{s + o, sum3(1, -s, -o)}
+}
+
+// odds weighs P(Z > line(X)) (or <) by the side that a normal guess says is the rarer, and by the other side
+// too where the guess was wrong.
 func (p *pair) odds(claimRare bool) Odds {
 	if claimRare {
 		return p.weigh(p.claimAbove)
@@ -94,46 +141,64 @@ func (p *pair) weigh(above bool) Odds {
 }
 
 // logProbability is log P(Z > line(X)) or log P(Z < line(X)): the stretch of X on which the line lies
-// in Z's support by the integral, what is beyond it where the tail is certain in closed form.
+// in Z's support by the integral, what is beyond it, where the tail is certain, in closed form.
 func (p *pair) logProbability(above bool) float64 {
 	g := integrand{kind: densityTimesTail, density: p.x, other: p.z, above: above}
-	s := &g.span
-	s.rateX, s.rateZ, s.slope, s.beta = p.rateX, p.rateZ, p.slope, !p.x.gamma
-	lo, hi := 0.0, p.top
-	// Where the line crosses 0 and, for Beta laws, 1.
-	zero, one := -p.offset/p.slope, (1-p.offset)/p.slope
-	first, last := zero, one
-	if p.slope < 0 {
-		first, last = one, zero
+	rising := p.slope > 0
+	first, last := p.crossings()
+	if !rising {
+		first, last = last, first
 	}
-	if p.x.gamma && p.slope > 0 {
-		last = math.Inf(1)
-	} else if p.x.gamma {
-		first = math.Inf(-1)
+	if p.top > 1 && rising {
+		last.x = math.Inf(1)
+	} else if p.top > 1 {
+		first.x = math.Inf(-1)
 	}
-	// Left of first the line is below the support for a rising line, above it for a falling one.
+	// Left of first a rising line is below Z's support, a falling one above it.
 	outer := math.Inf(-1)
-	certainLeft := (p.slope > 0) == above
-	if first > lo {
-		if certainLeft {
-			outer = p.logX(math.Min(first, hi), true)
-		}
+	if first.x > 0 && rising == above {
+		outer = p.logX(first, true)
 	}
-	if last < hi {
-		if !certainLeft {
-			outer = logSum(outer, p.logX(math.Max(last, lo), false))
-		}
+	if last.x < p.top && rising != above {
+		outer = logSum(outer, p.logX(last, false))
 	}
-	if first >= hi || last <= lo {
+	if first.x >= p.top || last.x <= 0 || p.top == 1 && (first.q <= 0 || last.q >= 1) {
 		return outer
 	}
-	p.lay(s, math.Max(lo, first), math.Min(hi, last), first > lo, last < hi)
-	mean := p.x.a / p.rateX
-	if s.beta {
-		mean = p.x.a / p.x.n
+	p.lay(&g.span, first, last)
+	mean := place{p.x.a / p.rateX, 0}
+	if p.top == 1 {
+		mean = place{p.x.a / p.x.n, p.x.b / p.x.n}
 	}
-	u := s.coordinate(mean)
-	return logSum(outer, g.logIntegral(u, p.width(s, u)))
+	p.rates(&g, above)
+	u := g.span.coordinate(mean)
+	return logSum(outer, g.logIntegral(u, p.width(&g.span, u)))
+}
+
+// rates is how fast the integrand falls off at the span's ends: the density as x^a, or as the stretch itself
+// where the end is not the support's; and the tail as z^a where it ends there in 0.
+func (p *pair) rates(g *integrand, above bool) {
+	s := &g.span
+	g.leftRate, g.rightRate = 1, 1
+	if s.lo == 0 {
+		g.leftRate = p.x.a
+	}
+	if s.q1 == 0 {
+		g.rightRate = p.x.b
+	}
+	if math.IsInf(s.width, 1) {
+		g.rightRate = slowRate
+	}
+	zero, one := &g.leftRate, &g.rightRate
+	if p.slope < 0 {
+		zero, one = one, zero
+	}
+	if !above && s.z0 == 0 {
+		*zero += p.z.a
+	}
+	if above && s.w1 == 0 {
+		*one += p.z.b
+	}
 }
 
 // width is about the standard deviation of X in the coordinate u, at most 1.
@@ -146,49 +211,62 @@ func (p *pair) width(s *span, u float64) float64 {
 	return math.Min(1, d*math.Exp(-logRate))
 }
 
-// lay fills in the span (lo, hi); cutLo and cutHi tell that the end is where the line leaves Z's support.
-func (p *pair) lay(s *span, lo, hi float64, cutLo, cutHi bool) {
-	s.lo, s.width = lo, hi-lo
-	s.x0, s.q1 = lo, 1-hi
-	zAt := func(x float64) float64 { return math.FMA(p.slope, x, p.offset) }
-	zLo, zHi := math.Max(zAt(lo), 0), math.Max(zAt(hi), 0)
-	wLo, wHi := math.Max(1-zAt(lo), 0), math.Max(1-zAt(hi), 0)
-	if lo == 0 {
-		zLo, wLo = p.offset, 1-p.offset
+// lay fills in the span between the crossings first and last, or the support's ends where these are inside.
+func (p *pair) lay(s *span, first, last place) {
+	s.rateX, s.rateZ, s.beta = p.rateX, p.rateZ, p.top == 1
+	s.slope = p.slope
+	if p.inverse {
+		s.slope = 1 / p.slope
 	}
-	if hi == 1 && s.beta {
-		zHi = p.slope + p.offset
-		wHi = (1 - p.slope) - p.offset
-	}
-	if p.slope > 0 {
-		s.z0, s.w1 = zLo, wHi
-		if cutLo {
-			s.z0 = 0
+	at0, at1 := p.ends()
+	lo, hi := place{0, 1}, place{p.top, 0}
+	zLo, zHi := at0, at1
+	rising := p.slope > 0
+	edge := func(low bool) place {
+		if low {
+			return place{0, 1}
 		}
-		if cutHi {
-			s.w1 = 0
-		}
-		return
+		return place{1, 0}
 	}
-	s.z0, s.w1 = zHi, wLo
-	if cutHi {
-		s.z0 = 0
+	if first.x > 0 {
+		lo, zLo = first, edge(rising)
 	}
-	if cutLo {
-		s.w1 = 0
+	if last.x < p.top && !(p.top == 1 && last.q <= 0) {
+		hi, zHi = last, edge(!rising)
+	}
+	s.lo, s.x0, s.q1 = lo.x, lo.x, hi.q
+	s.width = hi.x - lo.x
+	if s.beta && lo.x > 0.5 {
+		s.width = lo.q - hi.q
+	}
+	s.loQ = lo.q
+	if rising {
+		s.z0, s.w1 = zLo.x, zHi.q
+	} else {
+		s.z0, s.w1 = zHi.x, zLo.q
 	}
 }
 
 // logX is log P(X < x) or log P(X > x).
-func (p *pair) logX(x float64, isBelow bool) float64 {
-	if x <= 0 || x >= p.top {
-		if isBelow == (x > 0) {
+func (p *pair) logX(at place, isBelow bool) float64 {
+	if at.x <= 0 || at.x >= p.top || p.top == 1 && at.q <= 0 {
+		if isBelow == (at.x > 0) {
 			return 0
 		}
 		return math.Inf(-1)
 	}
-	q := 1 - x
-	below, above := p.x.logTailsLow(x*p.rateX, q, (1-x)-q)
+	x, q, low := at.x*p.rateX, at.q, 0.0
+	if p.top == 1 {
+		// The nearer end's distance is the exact one.
+		if x < 0.5 {
+			q = 1 - x
+			low = (1 - q) - x
+		} else {
+			x = 1 - q
+			low = -p.x.b / p.x.a * ((1 - x) - q)
+		}
+	}
+	below, above := p.x.logTailsLow(x, q, low)
 	if isBelow {
 		return below
 	}

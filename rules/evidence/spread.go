@@ -183,7 +183,7 @@ func (c *spreadCurve) logProbability(kind integrandKind) float64 {
 	if c.s0 > 0 && kind == beyond {
 		outer, _ = c.law.logTails(c.kappa*float64(c.s0*c.s0), 0)
 	}
-	g := integrand{kind: kind, spread: c}
+	g := integrand{kind: kind, spread: c, leftRate: c.leftRate(kind), rightRate: slowRate}
 	width := math.Min(1, math.Sqrt(0.5/c.law.a))
 	s := math.Sqrt(c.law.a / c.kappa)
 	if c.s0 == 0 {
@@ -191,7 +191,30 @@ func (c *spreadCurve) logProbability(kind integrandKind) float64 {
 	}
 	rho := math.Max(s-c.v, 0.5*math.Min(1, 1/c.rootK))
 	width = math.Min(1, width*s/rho)
+	if kind == beyond && c.v < 0 && c.fraction > 0 && math.Min(c.upper, c.lower) < 0 {
+		// With the mean beyond a limit more than half is outside both where sigma is small and where it is large: two
+		// peaks. The sum has to pass the second, which lies beyond s = v/d.
+		g.through, _, _ = g.peak(math.Log(math.Max(s, 1.5*c.v/math.Min(c.upper, c.lower))-c.v), width)
+		g.twoPeaks = true
+		rho = 0.1 * c.s0
+	}
 	return logSum(outer, g.logIntegral(math.Log(rho), width))
+}
+
+// leftRate is how fast the integrand falls off as u goes to -infinity: d log s/du as rho (once more where
+// ds/drho vanishes), the window as rho; or the density of log s.
+func (c *spreadCurve) leftRate(kind integrandKind) float64 {
+	if c.s0 == 0 {
+		return 2 * c.law.a
+	}
+	rate := 1.0
+	if c.fraction > 0 {
+		rate++
+	}
+	if kind == inside {
+		rate++
+	}
+	return rate
 }
 
 func (c *spreadCurve) odds(claimRare bool) Odds {
