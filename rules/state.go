@@ -466,11 +466,7 @@ func (s *State) weigh(i int) Look {
 
 // units is how many units a process's evidence rests on; fractional under a discount.
 func units(p *process) float64 {
-	sums := p.memory.Sums()
-	if p.Family == posterior.BinomialFamily {
-		return sums.Exposure
-	}
-	return sums.N
+	return p.memory.Sums().Units(p.Family)
 }
 
 // believed fills the scratch slice with what a claim's processes are believed to be.

@@ -65,6 +65,8 @@ type Claim struct {
 	Bound     float64 // Above, Below
 	Low, High float64 // Within; an infinite one stands for no limit on that side
 	Limits    bool    // Within: Low and High are the characteristic's own limits, filled in by Bind
+
+	places []int // column of the first mention of each process
 }
 
 // Known tells Bind what a process name stands for.
