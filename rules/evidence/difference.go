@@ -26,10 +26,10 @@ func differenceTail(one, two scaled, d float64) float64 {
 	return m.average(func(t student, root float64) float64 { return t.logTail(d / root) })
 }
 
-// differenceWindow is log P(lo < s1 T1 + s2 T2 < hi), the same average of windows.
-func differenceWindow(one, two scaled, lo, hi float64) float64 {
+// differenceWindow is log P(lo < s1 T1 + s2 T2 < hi), width being hi - lo: the same average of windows.
+func differenceWindow(one, two scaled, lo, hi, width float64) float64 {
 	m := newMixture(one, two)
-	return m.average(func(t student, root float64) float64 { return t.logWindow(lo/root, hi/root) })
+	return m.average(func(t student, root float64) float64 { return t.logWindow(lo/root, hi/root, width/root) })
 }
 
 // mixture is the law of B, written for nu2 <= nu1.
@@ -151,15 +151,15 @@ func (c *meansAt) within(lo, hi float64) Odds {
 	if contrary < -math.Ln2 {
 		return oddsOf(math.Min(contrary, 0)).against()
 	}
-	a, b := c.beyond(lo), c.beyond(hi)
+	a, b, width := c.beyond(lo), c.beyond(hi), hi-lo
 	var inside float64
 	switch {
 	case c.two.scale == 0:
-		inside = student{c.one.nu}.logWindow(a/c.one.scale, b/c.one.scale)
+		inside = student{c.one.nu}.logWindow(a/c.one.scale, b/c.one.scale, width/c.one.scale)
 	case c.one.scale == 0:
-		inside = student{c.two.nu}.logWindow(a/c.two.scale, b/c.two.scale)
+		inside = student{c.two.nu}.logWindow(a/c.two.scale, b/c.two.scale, width/c.two.scale)
 	default:
-		inside = differenceWindow(c.one, c.two, a, b)
+		inside = differenceWindow(c.one, c.two, a, b, width)
 	}
 	return Odds{LogFor: math.Min(inside, 0), LogAgainst: math.Min(contrary, 0)}
 }

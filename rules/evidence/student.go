@@ -33,22 +33,23 @@ func (t student) odds(y float64) Odds {
 	return oddsOf(t.logTail(y))
 }
 
-// logWindow is log P(lo < T < hi). A window whose ends have nearly one tail probability is
-// integrated from the density, so that nothing cancels. TestStudentWindow.
-func (t student) logWindow(lo, hi float64) float64 {
+// logWindow is log P(lo < T < hi), width being hi - lo, which the caller knows without
+// cancellation. A window whose ends have nearly one tail probability is integrated from the
+// density, so that nothing cancels. TestPublicMeans, TestWindowsInTheTail.
+func (t student) logWindow(lo, hi, width float64) float64 {
 	switch {
-	case lo >= hi:
+	case width <= 0:
 		return math.Inf(-1)
 	case hi <= 0:
-		return t.logWindow(-hi, -lo)
+		return t.logWindow(-hi, -lo, width)
 	case lo < 0:
-		return logSum(t.logWindow(0, -lo), t.logWindow(0, hi))
+		return logSum(t.logWindow(0, -lo, -lo), t.logWindow(0, hi, hi))
 	}
 	a, b := t.logTail(lo), t.logTail(hi)
 	if b-a < -math.Ln2 {
 		return a + log1mexp(b-a)
 	}
-	return t.logDensity(lo) + math.Log(t.panel(lo, hi))
+	return t.logDensity(lo) + math.Log(t.panel(lo, width))
 }
 
 // logDensity is the logarithm of the density, with Stirling's corrections in place of the
@@ -60,10 +61,11 @@ func (t student) logDensity(y float64) float64 {
 	return ratio - 0.5*math.Log(math.Pi*t.nu) - float64((a+0.5)*math.Log1p(float64(y*y)/t.nu))
 }
 
-// panel is the integral of the density from lo to hi in units of its value at lo, by
+// panel is the integral of the density over a width from lo on, in units of its value at lo, by
 // Gauss and Legendre's rule of 20 points; the density changes little over such a window.
-func (t student) panel(lo, hi float64) float64 {
-	half, mid := (hi-lo)/2, (hi+lo)/2
+func (t student) panel(lo, width float64) float64 {
+	half := width / 2
+	mid := lo + half
 	at0 := math.Log1p(float64(lo*lo) / t.nu)
 	sum := 0.0
 	for i, x := range legendreX {
