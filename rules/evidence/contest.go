@@ -163,8 +163,8 @@ func (c *contest) logTails(j int, x float64) (below, above float64) {
 
 // logWinner is the logarithm of f_w(x) prod_j F_j(z) dx/du.
 func (c *contest) logWinner(u float64) float64 {
-	x, q, z, w, logRate := c.span.at(u)
-	s := c.laws[c.which].logDensity(x*c.rates[c.which], q) + logRate - c.logMeasure(x, q)
+	x, q, z, w, rate := c.span.at(u)
+	s := c.laws[c.which].logDensity(x*c.rates[c.which], q) + math.Log(rate)
 	for j := range c.n {
 		if j != c.which {
 			s += c.logTail(j, z, w)
@@ -173,26 +173,14 @@ func (c *contest) logWinner(u float64) float64 {
 	return s
 }
 
-// logMeasure is log(x(1-x)), or log x for gamma: what turns a density of the logit into one of x.
-func (c *contest) logMeasure(x, q float64) float64 {
-	if c.span.beta {
-		return math.Log(x * q)
-	}
-	return math.Log(x)
-}
-
 func (c *contest) logTail(j int, x, q float64) float64 {
-	below, above := c.laws[j].logTails(x*c.rates[j], q)
-	if c.smallest {
-		return above
-	}
-	return below
+	return c.laws[j].logTail(x*c.rates[j], q, c.smallest)
 }
 
 // logChallengers is the logarithm of F_w(x) sum_j f_j(z) prod F_i(z) dz/du; the span's x is z here.
 func (c *contest) logChallengers(u float64) float64 {
-	z, q, x, w, logRate := c.span.at(u)
-	product := c.logTail(c.which, x, w) + logRate - c.logMeasure(z, q)
+	z, q, x, w, rate := c.span.at(u)
+	product := c.logTail(c.which, x, w) + math.Log(rate)
 	sum := math.Inf(-1)
 	for j := range c.n {
 		if j == c.which {

@@ -127,45 +127,61 @@ func (l *law) logTailsLow(x, q, low float64) (below, above float64) {
 
 // logTailsFrom is logTails at x, 1-x with the excess known better than these give it.
 func (l *law) logTailsFrom(x, q, lambda float64) (below, above float64) {
-	small, isBelow := l.tail(x, q, lambda, l.deviance(x, q, lambda))
-	small = math.Min(small, 0)
+	f, ratio, isBelow := l.tail(x, q, lambda, l.deviance(x, q, lambda))
+	small := math.Min(f+math.Log(ratio), 0)
 	if isBelow {
 		return small, log1mexp(small)
 	}
 	return log1mexp(small), small
 }
 
-// tail is the logarithm of the tail for which there is a positive expansion, and which it is.
-func (l *law) tail(x, q, lambda, d float64) (logTail float64, isBelow bool) {
-	f := l.logScale - d
+// logTail is log P(X > x) (above) or log P(X < x).
+func (l *law) logTail(x, q float64, above bool) float64 {
+	t, f := l.tailAt(x, q, above)
+	return t + math.Log(f)
+}
+
+// tailAt is P(X > x) (above) or P(X < x) as factor e^logarithm.
+func (l *law) tailAt(x, q float64, above bool) (logarithm, factor float64) {
+	lambda := l.excess(x, q, 0)
+	f, ratio, isBelow := l.tail(x, q, lambda, l.deviance(x, q, lambda))
+	if isBelow == above {
+		return 0, math.Max(1-float64(ratio*math.Exp(f)), 0)
+	}
+	return f, ratio
+}
+
+// tail is the tail for which there is a positive expansion, as ratio e^f, and which it is.
+func (l *law) tail(x, q, lambda, d float64) (f, ratio float64, isBelow bool) {
+	f = l.logScale - d
 	if l.reach > 0 {
 		w := math.Sqrt(2 * d)
 		switch {
 		case w > l.reach && lambda > 0:
-			return f + math.Log(l.fractionBelow(x, q, lambda)), true
+			return f, l.fractionBelow(x, q, lambda), true
 		case w > l.reach:
-			return f + math.Log(l.fractionAbove(x, q, lambda)), false
+			return f, l.fractionAbove(x, q, lambda), false
 		case lambda > 0:
-			return f + math.Log(float64(l.first*mills(w))-polynomial(l.rest[:], -w)), true
+			return f, float64(l.first*mills(w)) - polynomial(l.rest[:], -w), true
 		}
-		return f + math.Log(float64(l.first*mills(w))+polynomial(l.rest[:], w)), false
+		return f, float64(l.first*mills(w)) + polynomial(l.rest[:], w), false
 	}
 	if l.gamma || l.a <= l.b {
 		if low := l.lowEnd(); x <= low {
 			if l.a < smallShape {
-				return l.logHighOfSmall(x, q, low), false
+				return l.logHighOfSmall(x, q, low), 1, false
 			}
-			return f + math.Log(l.series(l.a, x)), true
+			return f, l.series(l.a, x), true
 		}
-		return f + math.Log(l.fractionAbove(x, q, lambda)), false
+		return f, l.fractionAbove(x, q, lambda), false
 	}
 	if low := l.lowEnd(); q <= low {
 		if l.b < smallShape {
-			return l.logHighOfSmall(x, q, low), true
+			return l.logHighOfSmall(x, q, low), 1, true
 		}
-		return f + math.Log(l.series(l.b, q)), false
+		return f, l.series(l.b, q), false
 	}
-	return f + math.Log(l.fractionBelow(x, q, lambda)), true
+	return f, l.fractionBelow(x, q, lambda), true
 }
 
 // lowEnd is the value of the smaller parameter's variable up to which its series serves: somewhat above

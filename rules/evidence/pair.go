@@ -18,16 +18,17 @@ type span struct {
 }
 
 // at is x, 1-x, z, 1-z at the coordinate u = log((x-lo)/(hi-x)), or log(x-lo) on an infinite span,
-// and log dx/du.
-func (s *span) at(u float64) (x, q, z, w, logRate float64) {
+// and du/dx inverted over what turns a density of logit x (log x) into one of x.
+func (s *span) at(u float64) (x, q, z, w, rate float64) {
 	if math.IsInf(s.width, 1) {
 		p := math.Exp(u)
-		return s.x0 + p, 0, s.z0 + float64(s.slope*p), 0, u
+		x = s.x0 + p
+		return x, 0, s.z0 + float64(s.slope*p), 0, p / x
 	}
 	// The distances from lo and hi.
 	e := math.Exp(-math.Abs(u))
-	near := s.width * e / (1 + e)
 	far := s.width / (1 + e)
+	near := far * e
 	p, r := far, near
 	if u < 0 {
 		p, r = near, far
@@ -38,7 +39,11 @@ func (s *span) at(u float64) (x, q, z, w, logRate float64) {
 	} else {
 		z, w = s.z0-float64(s.slope*r), s.w1-float64(s.slope*p)
 	}
-	return x, q, z, w, math.Log(p * r / s.width)
+	rate = p / x * (r / s.width)
+	if s.beta {
+		rate /= q
+	}
+	return x, q, z, w, rate
 }
 
 // coordinate is u at a place, kept off the ends.
@@ -66,20 +71,12 @@ func (s *span) coordinate(at place) float64 {
 	return math.Copysign(14, t-0.5)
 }
 
-// logDensityTimesTail is the logarithm of f_X(x) P(Z > z) (or < z) dx/du.
-func (g *integrand) logDensityTimesTail(u float64) float64 {
+// densityTimesTail is f_X(x) P(Z > z) (or < z) dx/du.
+func (g *integrand) densityTimesTail(u float64) (logarithm, factor float64) {
 	s := &g.span
-	x, q, z, w, logRate := s.at(u)
-	if s.beta {
-		logRate -= math.Log(x * q)
-	} else {
-		logRate -= math.Log(x)
-	}
-	below, above := g.other.logTails(z*s.rateZ, w)
-	if g.above {
-		below = above
-	}
-	return g.density.logDensity(x*s.rateX, q) + logRate + below
+	x, q, z, w, rate := s.at(u)
+	l, f := g.other.tailAt(z*s.rateZ, w, g.above)
+	return g.density.logDensity(x*s.rateX, q) + l, f * rate
 }
 
 // A pair is the law of x, the law of z and the line between them: z = slope x + offset, or with inverse
@@ -203,12 +200,12 @@ func (p *pair) rates(g *integrand, above bool) {
 
 // width is about the standard deviation of X in the coordinate u, at most 1.
 func (p *pair) width(s *span, u float64) float64 {
-	x, q, _, _, logRate := s.at(u)
-	d := x / math.Sqrt(p.x.a)
+	x, q, _, _, rate := s.at(u)
+	d := 1 / math.Sqrt(p.x.a)
 	if s.beta {
-		d = math.Sqrt(x * q / (p.x.n + 1))
+		d = 1 / math.Sqrt(x*q*(p.x.n+1))
 	}
-	return math.Min(1, d*math.Exp(-logRate))
+	return math.Min(1, d/rate)
 }
 
 // lay fills in the span between the crossings first and last, or the support's ends where these are inside.

@@ -39,13 +39,21 @@ func logSum(a, b float64) float64 {
 	return a + math.Log1p(math.Exp(b-a))
 }
 
-// polynomial is c[0] + c[1] x + ... by Horner's rule with one rounding a step.
+// polynomial is c[0] + c[1] x + ..., the even and the odd terms by Horner's rule side by side, so that one
+// chain need not wait for the other.
 func polynomial(c []float64, x float64) float64 {
-	s := 0.0
-	for i := len(c) - 1; i >= 0; i-- {
-		s = math.FMA(s, x, c[i])
+	v := x * x
+	i := len(c) - 1
+	even, odd := 0.0, 0.0
+	if i&1 == 0 {
+		even = c[i]
+		i--
 	}
-	return s
+	for ; i >= 1; i -= 2 {
+		odd = math.FMA(odd, v, c[i])
+		even = math.FMA(even, v, c[i-1])
+	}
+	return math.FMA(odd, x, even)
 }
 
 // deviance is t - log(1+t) for ratio = 1+t > 0, without cancellation near t = 0. Both are
@@ -58,8 +66,11 @@ func deviance(ratio, t float64) float64 {
 	}
 	u := t / (2 + t)
 	v := u * u
-	s := polynomial(devianceSeries[:], v)
-	return u * (t - float64(2*v*s))
+	series := devianceSeries[:]
+	if v < 0.008 {
+		series = series[:7]
+	}
+	return u * (t - float64(2*v*polynomial(series, v)))
 }
 
 // devianceSeries is 1/3, 1/5, 1/7, ...: u <= 1/4 wants eleven terms and five to spare.
@@ -138,20 +149,6 @@ func normalDensity(z float64) float64 {
 // normalExponent is z^2/2.
 func normalExponent(z float64) float64 { return 0.5 * float64(z*z) }
 
-// logNormalTail is log(1 - Phi(z)), with relative accuracy in 1 - Phi(z) for every z.
-func logNormalTail(z float64) float64 {
-	switch {
-	case z > 0:
-		if math.IsInf(z, 1) {
-			return math.Inf(-1)
-		}
-		return math.Log(mills(z)) - normalExponent(z) - logRoot2Pi
-	case z < -40:
-		return 0
-	}
-	return math.Log1p(-normalTail(-z))
-}
-
 // normalTail is 1 - Phi(z).
 func normalTail(z float64) float64 {
 	if z >= 0 {
@@ -163,13 +160,34 @@ func normalTail(z float64) float64 {
 	return 1 - normalTail(-z)
 }
 
-// logNormalWindow is log P(lo < Z < hi) of a standard normal Z, with relative accuracy also
+// normalTails is P(Z > a) + P(Z > b) of a standard normal Z as factor e^logarithm.
+func normalTails(a, b float64) (logarithm, factor float64) {
+	if a > b {
+		a, b = b, a
+	}
+	if a <= 0 {
+		return 0, normalTail(a) + normalTail(b)
+	}
+	factor = mills(a)
+	if rest := 0.5 * (b - a) * (b + a); rest < 45 {
+		factor += float64(mills(b) * math.Exp(-rest))
+	}
+	return -normalExponent(a) - logRoot2Pi, factor
+}
+
+// logNormalWindow is log P(lo < Z < hi).
+func logNormalWindow(lo, hi float64) float64 {
+	l, f := normalWindow(lo, hi)
+	return l + math.Log(f)
+}
+
+// normalWindow is P(lo < Z < hi) of a standard normal Z as factor e^logarithm, with relative accuracy also
 // where the window is narrow or deep in a tail: from a to a+d on the upper side,
 // phi(a) (m(a) - e^(-d(a+d/2)) m(a+d)); where that would cancel, the density's own integral
 // by sixteen points of Gauss and Legendre.
-func logNormalWindow(lo, hi float64) float64 {
+func normalWindow(lo, hi float64) (logarithm, factor float64) {
 	if !(lo < hi) {
-		return math.Inf(-1)
+		return math.Inf(-1), 1
 	}
 	if lo+hi < 0 {
 		lo, hi = -hi, -lo
@@ -178,11 +196,15 @@ func logNormalWindow(lo, hi float64) float64 {
 	switch {
 	case lo <= -0.5:
 		// The middle is inside: both tails together are below 0.62.
-		return math.Log1p(-(normalTail(-lo) + normalTail(hi)))
+		return 0, 1 - (normalTail(-lo) + normalTail(hi))
 	case lo > 0 && d*(lo+0.5*d) > 1:
-		return math.Log(mills(lo)-float64(math.Exp(-d*(lo+0.5*d))*mills(hi))) - normalExponent(lo) - logRoot2Pi
+		f := mills(lo)
+		if fall := d * (lo + 0.5*d); fall < 45 {
+			f -= float64(math.Exp(-fall) * mills(hi))
+		}
+		return -normalExponent(lo) - logRoot2Pi, f
 	case lo <= 0 && hi > 0.5:
-		return math.Log(1 - normalTail(-lo) - normalTail(hi))
+		return 0, 1 - normalTail(-lo) - normalTail(hi)
 	}
 	// Here d(lo+d/2) <= 1 or hi <= 1/2: a smooth integrand on a short stretch.
 	half := 0.5 * d
@@ -191,7 +213,7 @@ func logNormalWindow(lo, hi float64) float64 {
 		r, l := half*(1+x), half*(1-x)
 		s = math.FMA(legendreWeights[i], math.Exp(-r*(lo+0.5*r))+math.Exp(-l*(lo+0.5*l)), s)
 	}
-	return math.Log(half*s) - normalExponent(lo) - logRoot2Pi
+	return -normalExponent(lo) - logRoot2Pi, half * s
 }
 
 // normalQuantile is z with 1 - Phi(z) = p for 0 < p < 1 and q = 1-p given beside it, so

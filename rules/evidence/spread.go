@@ -53,6 +53,7 @@ type spreadCurve struct {
 	// The edge.
 	fraction    float64 // 0 for capability
 	logFraction float64
+	logInside   float64 // math.Log(1-f)
 	v           float64 // 3c; z_f
 	hazard      float64 // phi(z_f)/Q(z_f)
 	s0          float64 // s where rho = 0: 3c or z_{f/2}; 0 where s starts at 0 (one limit, c <= 0)
@@ -119,39 +120,42 @@ func logPair(x float64) (hi, lo float64) {
 
 func (s *spreadCurve) two() bool { return !math.IsInf(s.upper, 1) && !math.IsInf(s.lower, 1) }
 
-// at is s, v and log(2 dlog s/du) at the coordinate u: log rho, or log s where s starts at 0.
-func (c *spreadCurve) at(u float64) (s, v, logRate float64) {
+// edge is s, v and 2 dlog s/du at the coordinate u: log rho, or log s where s starts at 0.
+func (c *spreadCurve) edge(u float64) (s, v, rate float64) {
 	e := math.Exp(u)
 	if c.s0 == 0 {
-		return e, c.v, math.Ln2
+		return e, c.v, 2
 	}
 	if c.fraction == 0 {
-		return c.v + e, c.v, math.Ln2 + u - math.Log(c.v+e)
+		return c.v + e, c.v, 2 * e / (c.v + e)
 	}
-	s, rate := c.solve(e)
-	return s, s - e, math.Ln2 + u + math.Log(rate/s)
+	s, rate = c.solve(e)
+	return s, s - e, 2 * e * rate / s
 }
 
-// solve is s(rho) and ds/drho = tanh(rho s): Newton's method on log(Q(v)+Q(v+2rho)) = log f.
+// solve is s(rho) and ds/drho = tanh(rho s): Newton's method on log(Q(v)+Q(v+2rho)) = log f, or where f is
+// above 1/2 on the logarithm of what is inside, P(rho-s < Z < rho+s) = 1-f.
 func (c *spreadCurve) solve(rho float64) (s, rate float64) {
+	if c.fraction > 0.5 {
+		return c.solveInside(rho)
+	}
 	v := c.v
 	r := math.Exp(-2 * rho * (v + rho))
-	if r < 1e-18 && v+rho > 0 {
-		return v + rho, 1
+	if r < 1e-9 {
+		// Q(v+2rho) is r times Q(v) and less: one step of Newton's is exact to r^2.
+		v += r * mills(v+2*rho)
+		return v + rho, 1 - 2*r
 	}
 	v = math.Min(v+math.Log1p(r)/c.hazard, c.s0)
 	for range 30 {
-		r = math.Exp(-2 * rho * math.Max(v+rho, 0))
-		step := 0.0
-		if v > 0 {
-			m := mills(v) + float64(r*mills(v+2*rho))
-			step = (math.Log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
-		} else {
-			q := normalTail(v) + normalTail(v+2*rho)
-			step = (math.Log(q) - c.logFraction) * q / (normalDensity(v) * (1 + r))
-		}
+		// Halley's step: d is Newton's, bend is g''/g' of g = log(Q(v)+Q(v+2rho)).
+		r = math.Exp(-2 * rho * (v + rho))
+		m := mills(v) + float64(r*mills(v+2*rho))
+		d := (math.Log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
+		bend := (1+r)/m - (v+float64(r*(v+2*rho)))/(1+r)
+		step := d / (1 + 0.5*float64(d*bend))
 		v += step
-		if math.Abs(step) <= 1e-9*(0.01+math.Abs(v)) {
+		if math.Abs(step) <= 1e-6*(0.01+v) {
 			break
 		}
 	}
@@ -160,21 +164,38 @@ func (c *spreadCurve) solve(rho float64) (s, rate float64) {
 	return s, -math.Expm1(-2*rho*s) / (1 + r)
 }
 
-// logAt is the logarithm of the integrand: the law of s times the probability that the mean is inside the edge,
-// or outside it, given s.
-func (c *spreadCurve) logAt(kind integrandKind, u float64) float64 {
-	s, v, logRate := c.at(u)
-	f := c.law.logDensity(c.kappa*float64(s*s), 0) + logRate
+func (c *spreadCurve) solveInside(rho float64) (s, rate float64) {
+	s = math.Max(c.s0, rho+c.v)
+	for range 60 {
+		w := logNormalWindow(rho-s, rho+s)
+		step := (c.logInside - w) * math.Exp(w) / (normalDensity(rho-s) + normalDensity(rho+s))
+		s = math.Max(s+step, 0.5*s)
+		if math.Abs(step) <= 1e-9*s {
+			break
+		}
+	}
+	r := math.Exp(-2 * rho * s)
+	return s, -math.Expm1(-2*rho*s) / (1 + r)
+}
+
+// at is the integrand as factor e^logarithm: the density of s times the probability that the mean is inside the
+// edge, or outside it, given s.
+func (c *spreadCurve) at(kind integrandKind, u float64) (logarithm, factor float64) {
+	s, v, rate := c.edge(u)
+	f := c.law.logDensity(c.kappa*float64(s*s), 0)
 	up, low := c.rootK*(float64(s*c.upper)-v), c.rootK*(float64(s*c.lower)-v)
+	l, p := 0.0, 0.0
 	switch {
 	case kind == inside && math.IsInf(low, 1):
-		return f + logNormalTail(-up)
+		l, p = normalTails(-up, math.Inf(1))
 	case kind == inside && math.IsInf(up, 1):
-		return f + logNormalTail(-low)
+		l, p = normalTails(-low, math.Inf(1))
 	case kind == inside:
-		return f + logNormalWindow(-low, up)
+		l, p = normalWindow(-low, up)
+	default:
+		l, p = normalTails(up, low)
 	}
-	return f + logSum(logNormalTail(up), logNormalTail(low))
+	return f + l, p * rate
 }
 
 // logProbability is log P(claim) (inside) or of its contrary; for s below s0 nothing is inside.
@@ -244,7 +265,7 @@ func outsideOdds(p *Process, fraction float64) Odds {
 	if o, ok := c.degenerate(p); ok {
 		return o
 	}
-	c.fraction, c.logFraction = fraction, math.Log(fraction)
+	c.fraction, c.logFraction, c.logInside = fraction, math.Log(fraction), math.Log1p(-fraction)
 	c.v = normalQuantile(fraction, 1-fraction)
 	c.hazard = normalDensity(c.v) / fraction
 	s := math.Sqrt(c.law.a / c.kappa)
