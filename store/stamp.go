@@ -1,0 +1,144 @@
+package store
+
+import (
+	"encoding/json"
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"strconv"
+	"time"
+
+	bolt "go.etcd.io/bbolt"
+)
+
+// stampName is a small file beside the store that says when a program was last known to be
+// watching, and whether it ended in order. It is not synced: after a power cut an older one
+// serves.
+const stampName = "alive"
+
+type stamp struct {
+	Alive time.Time `json:"alive"`
+	Clean bool      `json:"clean"`
+}
+
+func (s *Store) readStamp() error {
+	text, err := os.ReadFile(filepath.Join(s.folder, stampName))
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil
+	}
+	var st stamp
+	if err == nil && json.Unmarshal(text, &st) != nil {
+		// A power cut may leave it empty: nothing is known but that the end was not in order.
+		st = stamp{Alive: time.Unix(0, 0)}
+		if info, e := os.Stat(filepath.Join(s.folder, stampName)); e == nil {
+			st.Alive = info.ModTime()
+		}
+	}
+	if err != nil {
+		return fmt.Errorf("%w: %w", ErrStorage, err)
+	}
+	s.lastAlive, s.clean = st.Alive.UTC(), st.Clean
+	return nil
+}
+
+func (s *Store) writeStamp(at time.Time, clean bool) error {
+	text, err := json.Marshal(stamp{at.UTC(), clean})
+	if err != nil {
+		return err
+	}
+	path := filepath.Join(s.folder, stampName)
+	if err = os.WriteFile(path+".new", text, 0o600); err == nil {
+		err = os.Rename(path+".new", path)
+	}
+	if err != nil {
+		return fmt.Errorf("%w: %w", ErrStorage, err)
+	}
+	return nil
+}
+
+// Alive notes that the program is watching at a moment.
+func (s *Store) Alive(at time.Time) error { return s.writeStamp(at, false) }
+
+// LastAlive is when the program before this one was last known to be watching, and whether it
+// had ended in order; zero where there was none.
+func (s *Store) LastAlive() (at time.Time, clean bool) { return s.lastAlive, s.clean }
+
+// renew checks a store that was not closed in order and copies it to a fresh file, so that
+// every page is read and written anew: after a failed sync the pages on the disk may not be
+// those in memory, and only a new file is certain.
+func (s *Store) renew(path string, wait time.Duration) error {
+	fresh := path + ".fresh"
+	err := s.guard("check after an end without order", func() error {
+		if err := check(s.db); err != nil {
+			return err
+		}
+		return copyTo(s.db, fresh)
+	})
+	if err == nil {
+		err = s.db.Close()
+	}
+	if err == nil {
+		err = os.Rename(fresh, path)
+	}
+	if err == nil {
+		err = syncFolder(s.folder)
+	}
+	if err != nil {
+		return fmt.Errorf("the store in %s was not closed in order and can't be renewed; restore a copy, or move the folder away and begin a new one: %w",
+			s.folder, err)
+	}
+	db, err := openFile(path, wait)
+	if err != nil {
+		return err
+	}
+	s.db = db
+	s.recovered = "the store had not been closed in order; it was checked, found sound and copied to a fresh file"
+	return nil
+}
+
+// check reads the whole file.
+func check(db *bolt.DB) error {
+	return db.View(func(tx *bolt.Tx) error {
+		var all error
+		for err := range tx.Check(bolt.WithKVStringer(plainKeys{})) {
+			all = errors.Join(all, err)
+		}
+		return all
+	})
+}
+
+// plainKeys writes keys in the messages of a check.
+type plainKeys struct{}
+
+func (plainKeys) KeyToString(b []byte) string   { return strconv.Quote(string(b)) }
+func (plainKeys) ValueToString(b []byte) string { return strconv.Itoa(len(b)) + " bytes" }
+
+// copyTo writes a consistent copy and syncs it.
+func copyTo(db *bolt.DB, path string) error {
+	file, err := os.OpenFile(path, os.O_CREATE|os.O_TRUNC|os.O_WRONLY, 0o600)
+	if err != nil {
+		return err
+	}
+	err = db.View(func(tx *bolt.Tx) error {
+		_, err := tx.WriteTo(file)
+		return err
+	})
+	if err == nil {
+		err = file.Sync()
+	}
+	return errors.Join(err, file.Close())
+}
+
+func syncFolder(folder string) error {
+	dir, err := os.Open(folder)
+	if err != nil {
+		return err
+	}
+	defer dir.Close()
+	if err := dir.Sync(); err != nil && !errors.Is(err, errors.ErrUnsupported) && !errors.Is(err, os.ErrInvalid) {
+		return err
+	}
+	return nil
+}
