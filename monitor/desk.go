@@ -15,7 +15,6 @@
 package monitor
 
 import (
-	"crypto/sha256"
 	"encoding/json"
 	"errors"
 	"fmt"
@@ -46,7 +45,8 @@ type Desk struct {
 	mu      sync.Mutex // held for one apply and commit, or one copy out of the state
 	state   *rules.State
 	sources map[string]*SourceStatus
-	failed  error // the first storage error; nothing is committed after it
+	failed  error             // the first storage error; nothing is committed after it
+	trouble map[string]string // of each feed: why its last delivery failed
 
 	told map[string]chan struct{} // a feed has messages; capacity 1
 }
@@ -69,7 +69,7 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	}
 	d := &Desk{
 		cfg: cfg, log: o.Log, now: o.Now, store: s,
-		sources: map[string]*SourceStatus{}, told: map[string]chan struct{}{},
+		sources: map[string]*SourceStatus{}, told: map[string]chan struct{}{}, trouble: map[string]string{},
 	}
 	for _, src := range cfg.Sources {
 		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}
@@ -243,17 +243,3 @@ func Program() string {
 	}
 	return "steelyard " + info.Main.Version + revision + modified + ", " + info.GoVersion
 }
-
-// replay drives a fresh state with the journal's records before index, which gives the state
-// as it was then.
-func (d *Desk) replay(index uint64) (*rules.State, error) {
-	state := rules.NewState()
-	err := d.store.Journal(0, index, func(e rules.Event, _ rules.Outcomes) error {
-		_, err := state.Apply(&e)
-		return err
-	})
-	return state, err
-}
-
-// digest is the SHA-256 of some bytes.
-func digest(b []byte) [32]byte { return sha256.Sum256(b) }

@@ -88,13 +88,13 @@ type LookAt struct {
 
 // BatchOf is one batch that the evidence rests on.
 type BatchOf struct {
-	Record  uint64         `json:"record"`
-	At      time.Time      `json:"at"`
-	Source  string         `json:"source"`
-	File    string         `json:"file"`
-	SHA256  string         `json:"sha256"`
-	Values  map[string]int `json:"values"` // measurements of each process of the claim
-	HeldRow int            `json:"held_rows,omitempty"`
+	Record   uint64         `json:"record"`
+	At       time.Time      `json:"at"`
+	Source   string         `json:"source"`
+	File     string         `json:"file"`
+	SHA256   string         `json:"sha256"`
+	Values   map[string]int `json:"values"` // measurements of each process of the claim
+	HeldRows int            `json:"held_rows,omitempty"`
 }
 
 // BeforeAfter is what was believed of a process before and after the crossing batch.

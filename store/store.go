@@ -247,7 +247,8 @@ type FileMemory struct {
 	Written int64    `json:"written"` // modification time, ns since 1970
 	SHA256  [32]byte `json:"sha256"`
 	Index   uint64   `json:"index"`   // of the record that dealt with it
-	Counted bool     `json:"counted"` // a batch was taken from it
+	Counted bool     `json:"counted"` // content that stood under this name is in a batch
+	Batch   bool     `json:"-"`       // this step takes the content as a batch
 }
 
 // Message is one message in the outbox.
@@ -356,7 +357,7 @@ func writeFile(tx *bolt.Tx, f *FileMemory) error {
 		return err
 	}
 	contents := tx.Bucket(contentsBucket)
-	if !f.Counted || contents.Get(f.SHA256[:]) != nil {
+	if !f.Batch || contents.Get(f.SHA256[:]) != nil {
 		return nil
 	}
 	return contents.Put(f.SHA256[:], append(number(f.Index), key...))

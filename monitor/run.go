@@ -1,0 +1,388 @@
+package monitor
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"net/http"
+	"os"
+	"path/filepath"
+	"sync"
+	"time"
+
+	"steelyard/monitor/daylog"
+	"steelyard/monitor/feed"
+	"steelyard/monitor/intake"
+	"steelyard/rules"
+	"steelyard/store"
+)
+
+// What one transaction may carry at most.
+const (
+	mostTogether  = 64
+	bytesTogether = 32 << 20
+)
+
+// aliveEvery is how often a daemon notes that it is watching, and so how exactly a stretch
+// without watching is known after a kill.
+const aliveEvery = 5 * time.Second
+
+// Run watches the sources until the context ends, and then ends in order. It returns the
+// first storage error, after which nothing was counted; ready, where it is not nil, is closed
+// once the start is in the journal and the sources are being looked through.
+func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
+	ctx, stop := context.WithCancel(ctx)
+	defer stop()
+	if err := d.begin(); err != nil {
+		return err
+	}
+	known, err := d.remembered()
+	if err != nil {
+		return err
+	}
+	control, gone, err := listen(d.cfg.Site.State)
+	if err != nil {
+		return fmt.Errorf("open the socket on which the verbs reach the daemon: %w", err)
+	}
+	server := &http.Server{Handler: d.handler(), ReadHeaderTimeout: 10 * time.Second}
+	var helpers sync.WaitGroup
+	helpers.Go(func() { _ = server.Serve(control) }) // ends with ErrServerClosed
+	helpers.Go(func() { d.keepTime(ctx) })
+	for i := range d.cfg.Feeds {
+		helpers.Go(func() { d.deliver(ctx, i) })
+	}
+	arrivals := make(chan intake.Arrival, mostTogether)
+	for i := range d.cfg.Sources {
+		src := &d.cfg.Sources[i]
+		helpers.Go(func() { intake.Watch(ctx, src, &d.cfg.Plan, known.of(src.Name), arrivals) })
+	}
+	if ready != nil {
+		close(ready)
+	}
+	err = d.write(ctx, arrivals, known)
+	stop()
+	err = errors.Join(err, server.Close())
+	helpers.Wait()
+	return errors.Join(err, d.end(err), gone())
+}
+
+// begin notes the start and puts the plan in force.
+func (d *Desk) begin() error {
+	host, err := os.Hostname()
+	if err != nil {
+		host = "unknown"
+	}
+	last, clean := d.store.LastAlive()
+	if _, err := d.commitOne(rules.Event{Started: &rules.Started{Program: Program(), Host: host, LastAlive: last, Clean: clean}}); err != nil {
+		return err
+	}
+	if err := d.Adopt(); err != nil {
+		return err
+	}
+	return d.WriteMissedDayLogs()
+}
+
+// end notes an end in order, and tells the feeds what is left once more.
+func (d *Desk) end(failed error) error {
+	if failed != nil {
+		return nil
+	}
+	_, err := d.commitOne(rules.Event{Stopped: &rules.Stopped{Why: "told to stop"}})
+	if err != nil {
+		return err
+	}
+	ctx, cancel := context.WithTimeout(context.Background(), 5*time.Second)
+	defer cancel()
+	for i := range d.cfg.Feeds {
+		d.deliverOnce(ctx, i)
+	}
+	return nil
+}
+
+// knownFiles is what has been dealt with, for the watchers, which ask of every file they see.
+type knownFiles struct {
+	mu    sync.Mutex
+	files map[string]map[string]knownFile // source, file
+}
+
+type knownFile struct{ size, written int64 }
+
+func (d *Desk) remembered() (*knownFiles, error) {
+	k := &knownFiles{files: map[string]map[string]knownFile{}}
+	for _, src := range d.cfg.Sources {
+		files := map[string]knownFile{}
+		if err := d.store.Files(src.Name, func(f store.FileMemory) { files[f.File] = knownFile{f.Size, f.Written} }); err != nil {
+			return nil, err
+		}
+		k.files[src.Name] = files
+	}
+	return k, nil
+}
+
+func (k *knownFiles) of(source string) intake.Known {
+	return func(file string, size int64, written time.Time) bool {
+		k.mu.Lock()
+		defer k.mu.Unlock()
+		f, ok := k.files[source][file]
+		return ok && f == knownFile{size, written.UnixNano()}
+	}
+}
+
+func (k *knownFiles) note(f store.FileMemory) {
+	k.mu.Lock()
+	defer k.mu.Unlock()
+	k.files[f.Source][f.File] = knownFile{f.Size, f.Written}
+}
+
+// write is the one writer: it commits what arrives, as much as waits in one transaction.
+func (d *Desk) write(ctx context.Context, arrivals <-chan intake.Arrival, known *knownFiles) error {
+	for {
+		var list []intake.Arrival
+		select {
+		case <-ctx.Done():
+			return nil
+		case a := <-arrivals:
+			list = gather(a, arrivals)
+		}
+		if err := d.take(list, known); err != nil {
+			return err
+		}
+	}
+}
+
+// gather takes what waits behind the first arrival, within bounds.
+func gather(first intake.Arrival, arrivals <-chan intake.Arrival) []intake.Arrival {
+	list, size := []intake.Arrival{first}, len(first.Content)
+	for len(list) < mostTogether && size < bytesTogether {
+		select {
+		case a := <-arrivals:
+			list, size = append(list, a), size+len(a.Content)
+		default:
+			return list
+		}
+	}
+	return list
+}
+
+// take turns arrivals into events and commits them.
+func (d *Desk) take(list []intake.Arrival, known *knownFiles) error {
+	var events []happening
+	fresh := map[[32]byte]string{} // contents that this transaction will take
+	for i := range list {
+		h, err := d.happening(&list[i], fresh)
+		if err != nil {
+			return err
+		}
+		events = append(events, h)
+	}
+	outcomes, refused, err := d.commit(events)
+	if err != nil {
+		return err
+	}
+	var again []intake.Arrival
+	for i := range events {
+		if refused[i] != nil {
+			// The engine would not have the batch: it is held, with the engine's sentence.
+			a := list[i]
+			a.Reading = &intake.Reading{SHA256: a.Reading.SHA256, Held: heldOf(&a, refused[i].Error())}
+			again = append(again, a)
+			continue
+		}
+		for _, f := range events[i].files {
+			known.note(f)
+		}
+		d.report(&events[i].event, &outcomes[i])
+	}
+	if len(again) > 0 {
+		return d.take(again, known)
+	}
+	return nil
+}
+
+func heldOf(a *intake.Arrival, reason string) *rules.Held {
+	h := &rules.Held{Source: a.Source, File: a.File, Size: a.Size, Reason: reason}
+	if a.Reading.Batch != nil {
+		h.SHA256 = a.Reading.Batch.SHA256
+	}
+	return h
+}
+
+// happening decides what an arrival means: a batch, something held, content that was taken
+// before, or a source that can or can't be looked at.
+func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happening, error) {
+	if a.File == "" {
+		return happening{event: rules.Event{Watching: &rules.Watching{Source: a.Source, Able: a.Able, Why: a.Why}}}, nil
+	}
+	memory := store.FileMemory{Source: a.Source, File: a.File, Size: a.Size, Written: a.Written.UnixNano(), SHA256: a.Reading.SHA256}
+	old, _, err := d.store.File(a.Source, a.File)
+	if err != nil {
+		return happening{}, err
+	}
+	memory.Counted = old.Counted
+	if a.Reading.Batch == nil {
+		return d.hold(a, a.Reading.Held, memory)
+	}
+	index, source, file, found, err := d.store.Taken(a.Reading.SHA256)
+	if err != nil {
+		return happening{}, err
+	}
+	name := source + " " + file
+	if !found {
+		name, found = fresh[a.Reading.SHA256]
+		index = d.store.Next()
+	}
+	if found {
+		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: a.Reading.Batch.SHA256, First: index, Name: name}}
+		memory.Counted = true
+		return happening{e, []store.FileMemory{memory}}, nil
+	}
+	if old.Counted {
+		reason := fmt.Sprintf("%s: a file of this name was counted before with other content (record %d), and counting both could count a row twice; "+
+			"drop what is new under a new name", a.File, old.Index)
+		return d.hold(a, heldOf(a, reason), memory)
+	}
+	memory.Counted, memory.Batch = true, true
+	fresh[a.Reading.SHA256] = a.Source + " " + a.File
+	return happening{rules.Event{Batch: a.Reading.Batch}, []store.FileMemory{memory}}, nil
+}
+
+// hold keeps a copy of what is held and makes the event of it.
+func (d *Desk) hold(a *intake.Arrival, held *rules.Held, memory store.FileMemory) (happening, error) {
+	if a.Content != nil {
+		name, err := intake.Keep(filepath.Join(d.cfg.Site.State, "held"), a.Reading.SHA256, a.Content)
+		if err != nil {
+			return happening{}, fmt.Errorf("%w: %w", store.ErrStorage, err)
+		}
+		held.Kept = name
+	}
+	return happening{rules.Event{Held: held}, []store.FileMemory{memory}}, nil
+}
+
+// report tells the log and the status what was committed.
+func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	note := func(source, file string) *SourceStatus {
+		s := d.sources[source]
+		s.LastFile, s.LastAt = file, e.At
+		return s
+	}
+	switch {
+	case e.Batch != nil:
+		s := note(e.Batch.Source, e.Batch.File)
+		if s.Counted++; len(e.Batch.Held) > 0 {
+			s.Held++
+			s.Remark = e.Batch.Held[0].Reason
+			d.log.Warn().Str("source", s.Name).Str("file", e.Batch.File).Int("rows", len(e.Batch.Held)).Msg("rows held: " + e.Batch.Held[0].Reason)
+		}
+		d.log.Info().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Batch.File).Int("rows", len(e.Batch.Rows.Line)).Msg("counted")
+	case e.Held != nil:
+		s := note(e.Held.Source, e.Held.File)
+		s.Held++
+		s.Remark = e.Held.Reason
+		d.log.Warn().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Held.File).Msg("held: " + e.Held.Reason)
+	case e.Again != nil:
+		s := note(e.Again.Source, e.Again.File)
+		s.Again++
+		d.log.Info().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Again.File).Msg("not counted: the same content was taken before as " + e.Again.Name)
+	case e.Watching != nil:
+		s := d.sources[e.Watching.Source]
+		s.Able, s.Why = e.Watching.Able, e.Watching.Why
+		if s.Able {
+			d.log.Info().Str("source", s.Name).Msg("the source can be looked at again")
+		} else {
+			d.log.Error().Str("source", s.Name).Msg("NOT LOOKING: " + s.Why)
+		}
+	}
+	plan := d.state.Plan()
+	for i := range out.Changes {
+		c := &out.Changes[i]
+		d.log.Warn().Uint64("record", e.Index).Str("alarm", feed.ID(c)).Str("cause", string(c.Cause)).Msg(plan.Tell(c, d.cfg.Site.Zone)[0])
+	}
+}
+
+// keepTime notes that the daemon is watching, and writes the day log when a day ends.
+func (d *Desk) keepTime(ctx context.Context) {
+	tick := time.NewTicker(aliveEvery)
+	defer tick.Stop()
+	site := d.cfg.Site
+	day := daylog.DayOf(d.now(), site.Zone, site.DayStarts)
+	for {
+		select {
+		case <-ctx.Done():
+			return
+		case <-tick.C:
+		}
+		now := d.now()
+		if err := d.store.Alive(now); err != nil {
+			d.log.Error().Err(err).Msg("note that the daemon is alive")
+		}
+		if now.Before(day.To) {
+			continue
+		}
+		if _, markdown, _, err := d.WriteDayLog(day.Label); err != nil {
+			d.log.Error().Err(err).Msg("write the day log")
+		} else {
+			d.log.Info().Str("file", markdown).Msg("the day log is written")
+		}
+		day = daylog.DayOf(now, site.Zone, site.DayStarts)
+	}
+}
+
+// deliver keeps one feed served, more slowly while it fails.
+func (d *Desk) deliver(ctx context.Context, i int) {
+	wake := d.told[d.cfg.Feeds[i].Name]
+	pause := time.Duration(0)
+	for {
+		if d.deliverOnce(ctx, i) {
+			pause = 0
+		} else {
+			pause = min(max(2*pause, time.Second), time.Minute)
+		}
+		again := time.NewTimer(time.Hour)
+		if pause > 0 {
+			again.Reset(pause)
+		}
+		select {
+		case <-ctx.Done():
+			again.Stop()
+			return
+		case <-wake:
+		case <-again.C:
+		}
+		again.Stop()
+	}
+}
+
+// deliverOnce delivers what waits for one feed; it reports whether the feed is served.
+func (d *Desk) deliverOnce(ctx context.Context, i int) bool {
+	name := d.cfg.Feeds[i].Name
+	f, err := feed.Open(d.cfg.Feeds[i])
+	for err == nil {
+		var messages []store.Message
+		if messages, _, err = d.store.Pending(name, mostTogether); err != nil || len(messages) == 0 {
+			break
+		}
+		var bodies [][]byte
+		for _, m := range messages {
+			bodies = append(bodies, m.Body)
+		}
+		if err = f.Deliver(ctx, bodies); err == nil {
+			err = d.store.Delivered(messages)
+		}
+	}
+	d.mu.Lock()
+	defer d.mu.Unlock()
+	d.trouble[name] = ""
+	if err != nil {
+		d.trouble[name] = err.Error()
+		d.log.Error().Err(err).Str("feed", name).Msg("the feed could not be told; it is tried again")
+	}
+	return err == nil
+}
+
+// waiting is how many messages of a feed are not delivered.
+func (d *Desk) waiting(name string) (int, error) {
+	_, all, err := d.store.Pending(name, 0)
+	return all, err
+}
