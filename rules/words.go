@@ -175,15 +175,14 @@ func (t *teller) absolute() string {
 	if !t.plainDifference() {
 		return fmt.Sprintf("%s holds", t.c)
 	}
-	a, b := t.line(0), t.line(1)
+	pair := fmt.Sprintf("%ss of %s and %s", noun[t.c.Kind], t.line(0), t.line(1))
 	switch t.c.Test {
 	case claim.Below:
-		return fmt.Sprintf("%s of %s and %s agree within %s", noun[t.c.Kind], a, b, t.step(t.c.Bound))
+		return fmt.Sprintf("%s agree within %s", pair, t.step(t.c.Bound))
 	case claim.Above:
-		return fmt.Sprintf("%s of %s and %s differ by more than %s", noun[t.c.Kind], a, b, t.step(t.c.Bound))
+		return fmt.Sprintf("%s differ by more than %s", pair, t.step(t.c.Bound))
 	}
-	return fmt.Sprintf("%s of %s and %s differ by between %s and %s",
-		noun[t.c.Kind], a, b, number(t.c.Low), t.step(t.c.High))
+	return fmt.Sprintf("%s differ by between %s and %s", pair, number(t.c.Low), t.step(t.c.High))
 }
 
 func (t *teller) ratio() string {

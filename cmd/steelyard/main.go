@@ -48,7 +48,6 @@ const (
 	exitUsage         = 2
 	exitHeld          = 10 // done, but something was held
 	exitAlarm         = 11 // an alarm stands, where that was asked
-	exitUnverified    = 12
 	exitStoreTaken    = 13
 	exitConfiguration = 78
 	exitInterrupted   = 130
@@ -77,12 +76,15 @@ func run(args []string, out, errOut io.Writer) int {
 		fmt.Fprintln(errOut, "steelyard:", err)
 		return exitFailed
 	}
-	if len(args) == 0 {
+	bare := len(args) == 0
+	if bare {
 		args = []string{"--help"}
-		status = exitUsage
 	}
 	ctx, err := parser.Parse(args)
-	if exited {
+	switch {
+	case exited && bare:
+		return exitUsage
+	case exited:
 		return status
 	}
 	d := &desk{commandLine: line, out: out, err: errOut}
@@ -105,12 +107,10 @@ func (d *desk) end(err error) int {
 		return exitDone
 	case errors.As(err, &silent):
 		return int(silent)
-	case errors.As(err, &faults):
+	case errors.As(err, &faults), errors.Is(err, errConfiguration):
 		return d.say(err, exitConfiguration)
 	case errors.Is(err, store.ErrHeld):
 		return d.say(err, exitStoreTaken)
-	case errors.Is(err, store.ErrStorage):
-		return d.say(err, exitFailed)
 	}
 	return d.say(err, exitFailed)
 }
@@ -139,11 +139,15 @@ func (d *desk) object(v any) error {
 	return err
 }
 
+// errConfiguration is what keeps a verb from its configuration, short of Faults in it.
+var errConfiguration = errors.New("no configuration")
+
 // configuration reads the configuration that the command line names.
 func (d *desk) configuration() (*config.Config, error) {
 	cfg, err := config.Load(d.Config)
 	if errors.Is(err, os.ErrNotExist) {
-		return nil, fmt.Errorf("there is no configuration %s here; name one with --config, or copy config.example.toml and change it", d.Config)
+		return nil, fmt.Errorf("%w: there is no file %s here; name one with --config, or copy config.example.toml and change it",
+			errConfiguration, d.Config)
 	}
 	return cfg, err
 }

@@ -98,7 +98,7 @@ func (c *checker) remember(key string, v any) posterior.Remember {
 			return whole
 		}
 		if err := r.Check(); err != nil {
-			c.fault(key, "", expected, "%v", err)
+			c.fault(key, "", expected, "%s", strings.TrimPrefix(err.Error(), "remember: "))
 			return whole
 		}
 		return r
