@@ -53,12 +53,16 @@ func lineOdds(one, two *law, rate1, rate2, slope, offset, mean1, mean2, sd1, sd2
 // betaLargestOdds is the odds of X_which - max of the others > tolerance, X_i ~ Beta(a[i], b[i])
 // independent (contest). TestPublicCases, TestLargestSums.
 func betaLargestOdds(a, b []float64, which int, tolerance float64) Odds {
-	var c contest
+	c := betaContest(a, b, which, tolerance)
+	return c.odds()
+}
+
+func betaContest(a, b []float64, which int, tolerance float64) contest {
+	c := contest{n: len(a), which: which, tolerance: tolerance, top: 1}
 	for i := range a {
 		c.laws[i], c.rates[i] = betaLaw(a[i], b[i]), 1
 	}
-	c.n, c.which, c.tolerance, c.top = len(a), which, tolerance, 1
-	return c.odds()
+	return c
 }
 
 // betaSmallestOdds is the odds of X_which - min of the others > tolerance: in 1-X the contrary of

@@ -22,7 +22,7 @@ type contest struct {
 	span      span // of x for the event, of z for the contrary
 }
 
-// odds weighs the event, and its contrary too where the event is not the rarer.
+// odds weighs the event, or its contrary where the event is not the rarer.
 func (c *contest) odds() Odds {
 	// A difference of two such quantities is between -top and top.
 	if math.Abs(c.tolerance) >= c.top {
@@ -32,7 +32,7 @@ func (c *contest) odds() Odds {
 	if logFor < -0.5 {
 		return oddsOf(logFor)
 	}
-	return Odds{LogFor: logFor, LogAgainst: math.Min(c.logContrary(), 0)}
+	return oddsOf(c.logContrary()).against()
 }
 
 // logEvent is log P(event). Where x-tolerance is beyond the support the product is 0 or 1.

@@ -78,7 +78,7 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 	if g.rightRate < slowRate {
 		m.right = 1
 	}
-	h := 0.85 * scale / (1 + m.left + m.right)
+	h := 0.8 * scale / (1 + m.left + m.right)
 	sum, left, right := g.sweep(&m, h)
 	// Where the logarithms are large, their rounding shows.
 	enough := g.agreement() + 1e-15*math.Abs(top)

@@ -44,7 +44,7 @@ func betaLaw(a, b float64) law {
 	l.logScale = stirling(l.n) - stirling(a) - stirling(b) - logRoot2Pi + 0.5*math.Log(a/l.n*b)
 	if a >= smoothFrom && b >= smoothFrom {
 		l.expand(a/l.n*b, (b-a)/l.n, 1/l.n)
-		l.reach = 0.6 * math.Sqrt(math.Min(a, b))
+		l.reach = 0.7 * math.Sqrt(a/l.n*b)
 	}
 	return l
 }
@@ -54,7 +54,7 @@ func gammaLaw(a float64) law {
 	l.logScale = -stirling(a) - logRoot2Pi + 0.5*math.Log(a)
 	if a >= smoothFrom {
 		l.expand(a, 1, 0)
-		l.reach = 0.6 * math.Sqrt(a)
+		l.reach = 0.7 * math.Sqrt(a)
 	}
 	return l
 }

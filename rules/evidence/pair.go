@@ -121,7 +121,7 @@ func (p *pair) ends() (at0, at1 place) {
 }
 
 // odds weighs P(Z > line(X)) (or <) by the side that a normal guess says is the rarer, and by the other side
-// too where the guess was wrong.
+// where the guess was wrong.
 func (p *pair) odds(claimRare bool) Odds {
 	if claimRare {
 		return p.weigh(p.claimAbove)
@@ -132,7 +132,7 @@ func (p *pair) odds(claimRare bool) Odds {
 func (p *pair) weigh(above bool) Odds {
 	o := oddsOf(p.logProbability(above))
 	if o.LogFor > -0.5 {
-		o.LogAgainst = math.Min(p.logProbability(!above), 0)
+		return oddsOf(p.logProbability(!above)).against()
 	}
 	return o
 }
@@ -156,10 +156,10 @@ func (p *pair) logProbability(above bool) float64 {
 	if first.x > 0 && rising == above {
 		outer = p.logX(first, true)
 	}
-	if last.x < p.top && rising != above {
+	if p.short(last) && rising != above {
 		outer = logSum(outer, p.logX(last, false))
 	}
-	if first.x >= p.top || last.x <= 0 || p.top == 1 && (first.q <= 0 || last.q >= 1) {
+	if !p.short(first) || last.x <= 0 {
 		return outer
 	}
 	p.lay(&g.span, first, last)
@@ -198,6 +198,14 @@ func (p *pair) rates(g *integrand, above bool) {
 	}
 }
 
+// short tells whether a place is short of the support's upper end.
+func (p *pair) short(at place) bool {
+	if p.top == 1 {
+		return at.q > 0
+	}
+	return at.x < p.top
+}
+
 // width is about the standard deviation of X in the coordinate u, at most 1.
 func (p *pair) width(s *span, u float64) float64 {
 	x, q, _, _, rate := s.at(u)
@@ -228,7 +236,7 @@ func (p *pair) lay(s *span, first, last place) {
 	if first.x > 0 {
 		lo, zLo = first, edge(rising)
 	}
-	if last.x < p.top && !(p.top == 1 && last.q <= 0) {
+	if p.short(last) {
 		hi, zHi = last, edge(!rising)
 	}
 	s.lo, s.x0, s.q1 = lo.x, lo.x, hi.q
@@ -246,7 +254,7 @@ func (p *pair) lay(s *span, first, last place) {
 
 // logX is log P(X < x) or log P(X > x).
 func (p *pair) logX(at place, isBelow bool) float64 {
-	if at.x <= 0 || at.x >= p.top || p.top == 1 && at.q <= 0 {
+	if at.x <= 0 || !p.short(at) {
 		if isBelow == (at.x > 0) {
 			return 0
 		}

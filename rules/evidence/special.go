@@ -217,13 +217,13 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 }
 
 // normalQuantile is z with 1 - Phi(z) = p for 0 < p < 1 and q = 1-p given beside it, so
-// that neither end loses digits: Newton's method on log(1-Phi) from the two-term asymptote.
+// that neither end loses digits (in the middle 1/2 - p is exact): Newton's method on log(1-Phi) from the two-term asymptote.
 func normalQuantile(p, q float64) float64 {
 	if p > q {
 		return -normalQuantile(q, p)
 	}
 	if p > 0.3 {
-		return normalCentre(0.5 * (q - p))
+		return normalCentre(0.5 - p)
 	}
 	l := math.Log(p)
 	z := math.Sqrt(math.Max(0.1, -2*l-1.8379-math.Log(math.Max(1, -2*l-1.8379))))

@@ -238,6 +238,7 @@ func (c *spreadCurve) leftRate(kind integrandKind) float64 {
 	return rate
 }
 
+// odds weighs the side that is the rarer at the estimates, and the other where that was wrong.
 func (c *spreadCurve) odds(claimRare bool) Odds {
 	kind, other := beyond, inside
 	if claimRare {
@@ -245,7 +246,7 @@ func (c *spreadCurve) odds(claimRare bool) Odds {
 	}
 	o := oddsOf(c.logProbability(kind))
 	if o.LogFor > -0.5 {
-		o.LogAgainst = math.Min(c.logProbability(other), 0)
+		o = oddsOf(c.logProbability(other)).against()
 	}
 	if !claimRare {
 		return o.against()
