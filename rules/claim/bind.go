@@ -123,7 +123,7 @@ func (c *Claim) Spread(characteristic, line string, lines []string) (*Claim, err
 // Nearest is the word nearest to one that was read, by the number of letters to change; empty
 // where none is near.
 func Nearest(word string, words []string) string {
-	best, least := "", 1+max(1, len(word)/3)
+	best, least := "", min(len(word), 1+max(2, len(word)/3))
 	for _, w := range words {
 		if d := distance(strings.ToLower(word), strings.ToLower(w)); d < least {
 			best, least = w, d

@@ -139,10 +139,6 @@ func (p *parser) build(v value, test Test, low, high float64) (*Claim, *Error) {
 			for i := range c.Terms {
 				c.Terms[i].Weight /= w
 			}
-			if len(c.Terms) == 2 && scale < 0 {
-				c.Terms[0], c.Terms[1] = Term{1, c.Terms[1].Process}, Term{-1, c.Terms[0].Process}
-				scale = -scale
-			}
 		}
 	default:
 		scale = v.scale
