@@ -123,7 +123,7 @@ func (c *Claim) Spread(characteristic, line string, lines []string) (*Claim, err
 // Nearest is the word nearest to one that was read, by the number of letters to change; empty
 // where none is near.
 func Nearest(word string, words []string) string {
-	best, least := "", min(len(word), 1+max(2, len(word)/3))
+	best, least := "", 1+max(1, len(word)/3)
 	for _, w := range words {
 		if d := distance(strings.ToLower(word), strings.ToLower(w)); d < least {
 			best, least = w, d
@@ -132,22 +132,28 @@ func Nearest(word string, words []string) string {
 	return best
 }
 
-// distance is Levenshtein's.
+// distance is Damerau and Levenshtein's: letters to change, add, leave out, or swap with the
+// next one.
 func distance(a, b string) int {
-	row := make([]int, len(b)+1)
-	for j := range row {
-		row[j] = j
+	rows := make([][]int, len(a)+1)
+	for i := range rows {
+		rows[i] = make([]int, len(b)+1)
+		rows[i][0] = i
 	}
-	for i := range len(a) {
-		corner := row[0]
-		row[0] = i + 1
-		for j := range len(b) {
-			cost := corner
-			if a[i] != b[j] {
-				cost = min(corner, row[j], row[j+1]) + 1
+	for j := range rows[0] {
+		rows[0][j] = j
+	}
+	for i := 1; i <= len(a); i++ {
+		for j := 1; j <= len(b); j++ {
+			change := rows[i-1][j-1]
+			if a[i-1] != b[j-1] {
+				change++
 			}
-			corner, row[j+1] = row[j+1], cost
+			rows[i][j] = min(change, rows[i-1][j]+1, rows[i][j-1]+1)
+			if i > 1 && j > 1 && a[i-1] == b[j-2] && a[i-2] == b[j-1] {
+				rows[i][j] = min(rows[i][j], rows[i-2][j-2]+1)
+			}
 		}
 	}
-	return row[len(b)]
+	return rows[len(a)][len(b)]
 }
