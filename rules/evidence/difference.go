@@ -23,13 +23,13 @@ func meanOf(p *Process) scaled {
 // TestBehrensFisherTable, TestSweepMeans.
 func differenceTail(one, two scaled, d float64) float64 {
 	m := newMixture(one, two)
-	return m.average(func(t student, root float64) float64 { return t.logTail(d / root) })
+	return m.average(d, 0, 0)
 }
 
 // differenceWindow is log P(lo < s1 T1 + s2 T2 < hi), width being hi - lo: the same average of windows.
 func differenceWindow(one, two scaled, lo, hi, width float64) float64 {
 	m := newMixture(one, two)
-	return m.average(func(t student, root float64) float64 { return t.logWindow(lo/root, hi/root, width/root) })
+	return m.average(lo, hi, width)
 }
 
 // mixture is the law of B, written for nu2 <= nu1.
@@ -44,13 +44,15 @@ func newMixture(one, two scaled) mixture {
 	return mixture{one.scale, two.scale, one.nu, two.nu, one.nu + two.nu}
 }
 
-// average is the logarithm of the mean over B of e^f, where f gets the Student law of the sum
-// given B and its scale. It goes outwards from the mode of the weight until what is left, f
-// being at most 0, is below half an ulp of the sum.
-func (m *mixture) average(f func(student, float64) float64) float64 {
+// average is the logarithm of the mean over B of P(sum > lo) or, with a width, of
+// P(lo < sum < hi), under the Student law that the sum has given B. It goes outwards from the
+// mode of the weight until what is left, a probability being at most 1, is below half an ulp of
+// the sum.
+func (m *mixture) average(lo, hi, width float64) float64 {
 	h := 1 / math.Sqrt(1/(0.35*0.35)+1/(0.62*0.62*(2/m.nu1+2/m.nu2)))
-	t := student{m.n}
-	var logSumOf, weights float64 = math.Inf(-1), 0
+	t := newStudent(m.n)
+	var sum growing
+	weights := 0.0
 	for _, side := range [2]float64{1, -1} {
 		for i := 0; i < 100000; i++ {
 			if i == 0 && side < 0 {
@@ -59,15 +61,47 @@ func (m *mixture) average(f func(student, float64) float64) float64 {
 			du := side * h * float64(i)
 			logW := m.logWeight(du)
 			c := float64(m.s1*m.s1*m.nu1)*m.perB(du) + float64(m.s2*m.s2*m.nu2)*m.perRest(du)
-			logSumOf = logSum(logSumOf, logW+f(t, math.Sqrt(c/m.n)))
+			root := math.Sqrt(c / m.n)
+			l, factor := 0.0, 1.0
+			if width > 0 {
+				l = t.logWindow(lo/root, hi/root, width/root)
+			} else {
+				l, factor = t.tail(lo / root)
+			}
+			sum.add(logW+l, factor)
 			weights += math.Exp(logW)
-			if logW < -45 && logW-logSumOf < -36 {
+			if logW < -45 && sum.beyond(logW) {
 				break
 			}
 		}
 	}
-	return logSumOf - math.Log(weights)
+	return sum.log() - math.Log(weights)
 }
+
+// growing is a sum of positive terms factor e^logarithm of any size, kept as a number times
+// e^from.
+type growing struct{ from, sum float64 }
+
+func (g *growing) add(logarithm, factor float64) {
+	if math.IsInf(logarithm, -1) || factor == 0 {
+		return
+	}
+	if g.sum == 0 {
+		g.from = logarithm
+	}
+	if logarithm-g.from > 300 {
+		g.sum *= math.Exp(g.from - logarithm)
+		g.from = logarithm
+	}
+	g.sum += float64(factor * math.Exp(logarithm-g.from))
+}
+
+// beyond says whether a term of that logarithm is lost in the rounding of the sum.
+func (g *growing) beyond(logarithm float64) bool {
+	return g.sum > 0 && math.Exp(logarithm-g.from) < 2e-16*g.sum
+}
+
+func (g *growing) log() float64 { return g.from + math.Log(g.sum) }
 
 // logWeight is the log density of u at du from the mode, less that at the mode.
 func (m *mixture) logWeight(du float64) float64 {
@@ -137,11 +171,23 @@ func (c *meansAt) above(x float64) Odds {
 func (c *meansAt) tail(d float64) Odds {
 	switch {
 	case c.two.scale == 0:
-		return oddsOf(student{c.one.nu}.logTail(d / c.one.scale))
+		return one(c.one, d)
 	case c.one.scale == 0:
-		return oddsOf(student{c.two.nu}.logTail(d / c.two.scale))
+		return one(c.two, d)
 	}
 	return oddsOf(differenceTail(c.one, c.two, d))
+}
+
+// one is the odds of one scaled Student variable lying above d >= 0.
+func one(s scaled, d float64) Odds {
+	t := newStudent(s.nu)
+	return oddsOf(math.Min(t.logTail(d/s.scale), 0))
+}
+
+// oneWindow is the logarithm of its probability to lie between lo and hi, width apart.
+func oneWindow(s scaled, lo, hi, width float64) float64 {
+	t := newStudent(s.nu)
+	return t.logWindow(lo/s.scale, hi/s.scale, width/s.scale)
 }
 
 // within is the odds of the combination lying between lo and hi, each side integrated for
@@ -155,9 +201,9 @@ func (c *meansAt) within(lo, hi float64) Odds {
 	var inside float64
 	switch {
 	case c.two.scale == 0:
-		inside = student{c.one.nu}.logWindow(a/c.one.scale, b/c.one.scale, width/c.one.scale)
+		inside = oneWindow(c.one, a, b, width)
 	case c.one.scale == 0:
-		inside = student{c.two.nu}.logWindow(a/c.two.scale, b/c.two.scale, width/c.two.scale)
+		inside = oneWindow(c.two, a, b, width)
 	default:
 		inside = differenceWindow(c.one, c.two, a, b, width)
 	}

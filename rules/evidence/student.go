@@ -8,35 +8,36 @@ import "math"
 //	P(T > y) = 1/2 P(B > y^2/(nu+y^2)), B ~ Beta(1/2, nu/2), y >= 0
 //
 // (Abramowitz & Stegun 26.7.1). TestStudentTails.
-type student struct{ nu float64 }
-
-// logTail is log P(T > y) for y >= 0.
-func (t student) logTail(y float64) float64 {
-	if y == 0 {
-		return -math.Ln2
-	}
-	if math.IsInf(y, 1) {
-		return math.Inf(-1)
-	}
-	y2 := float64(y * y)
-	if y2 <= t.nu {
-		return betaOdds(0.5, t.nu/2, y2/(t.nu+y2)).LogFor - math.Ln2
-	}
-	return betaOdds(t.nu/2, 0.5, t.nu/(t.nu+y2)).LogAgainst - math.Ln2
+type student struct {
+	nu  float64
+	law law // of B
 }
 
-// odds is the odds of T > y, each side with relative accuracy.
-func (t student) odds(y float64) Odds {
-	if y < 0 {
-		return t.odds(-y).against()
+func newStudent(nu float64) student { return student{nu, betaLaw(0.5, nu/2)} }
+
+// tail is P(T > y) for y >= 0 as factor e^logarithm.
+func (t *student) tail(y float64) (logarithm, factor float64) {
+	if y == 0 {
+		return 0, 0.5
 	}
-	return oddsOf(t.logTail(y))
+	y2 := float64(y * y)
+	if math.IsInf(y2, 1) {
+		return math.Inf(-1), 1
+	}
+	logarithm, factor = t.law.tailAt(y2/(t.nu+y2), t.nu/(t.nu+y2), true)
+	return logarithm, factor / 2
+}
+
+// logTail is log P(T > y) for y >= 0.
+func (t *student) logTail(y float64) float64 {
+	l, f := t.tail(y)
+	return l + math.Log(f)
 }
 
 // logWindow is log P(lo < T < hi), width being hi - lo, which the caller knows without
 // cancellation. A window whose ends have nearly one tail probability is integrated from the
 // density, so that nothing cancels. TestPublicMeans, TestWindowsInTheTail.
-func (t student) logWindow(lo, hi, width float64) float64 {
+func (t *student) logWindow(lo, hi, width float64) float64 {
 	switch {
 	case width <= 0:
 		return math.Inf(-1)
@@ -54,7 +55,7 @@ func (t student) logWindow(lo, hi, width float64) float64 {
 
 // logDensity is the logarithm of the density, with Stirling's corrections in place of the
 // difference of two large logarithms of gamma functions.
-func (t student) logDensity(y float64) float64 {
+func (t *student) logDensity(y float64) float64 {
 	a := t.nu / 2
 	// log Gamma(a+1/2) - log Gamma(a) = log(a)/2 + a log1p(1/(2a)) - 1/2 + stirling(a+1/2) - stirling(a)
 	ratio := math.Log(a)/2 - deviance(1+0.5/a, 0.5/a)*a + stirling(a+0.5) - stirling(a)
@@ -63,7 +64,7 @@ func (t student) logDensity(y float64) float64 {
 
 // panel is the integral of the density over a width from lo on, in units of its value at lo, by
 // Gauss and Legendre's rule of 20 points; the density changes little over such a window.
-func (t student) panel(lo, width float64) float64 {
+func (t *student) panel(lo, width float64) float64 {
 	half := width / 2
 	mid := lo + half
 	at0 := math.Log1p(float64(lo*lo) / t.nu)
