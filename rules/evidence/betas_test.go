@@ -201,7 +201,8 @@ func TestBetaLineExactSums(t *testing.T) {
 		p := exactBetaAbove(a1, b1, a2, b2)
 		contrary := new(big.Rat).Sub(big.NewRat(1, 1), p)
 		o := betaLineOdds(float64(a1), float64(b1), float64(a2), float64(b2), 1, 0)
-		e := off(o, bigLog(new(big.Float).SetPrec(200).SetRat(p)), bigLog(new(big.Float).SetPrec(200).SetRat(contrary)))
+		logOf := func(r *big.Rat) float64 { return bigLog(new(big.Float).SetPrec(200).SetRat(r)) }
+		e := off(o, logOf(p), logOf(contrary))
 		worst = math.Max(worst, e)
 		if e > 1e-12 {
 			t.Errorf("Beta(%d,%d) over Beta(%d,%d): %v, relative error %.1e", a1, b1, a2, b2, o, e)
@@ -211,7 +212,8 @@ func TestBetaLineExactSums(t *testing.T) {
 }
 
 func exactBetaAbove(a1, b1, a2, b2 int64) *big.Rat {
-	inverseB := func(a, b int64) *big.Rat { // 1/B(a, b) = a C(a+b-1, a)... as (a+b-1)!/((a-1)!(b-1)!)
+	// 1/B(a, b) = (a+b-1) C(a+b-2, a-1)
+	inverseB := func(a, b int64) *big.Rat {
 		n := new(big.Int).Binomial(a+b-2, a-1)
 		return new(big.Rat).SetInt(n.Mul(n, big.NewInt(a+b-1)))
 	}
@@ -224,8 +226,8 @@ func exactBetaAbove(a1, b1, a2, b2 int64) *big.Rat {
 	return sum.Mul(sum, inverseB(a2, b2))
 }
 
-// Logarithms of window probabilities by mpmath with 60 digits: the integral of the density, and for the fourth, where
-// that integral has only 10 digits, the difference of two series.
+// Logarithms of window probabilities by mpmath with 60 digits: the integral of the density, and for the
+// fourth, where that integral has only 10 digits, the difference of two series.
 func TestBetaWindow(t *testing.T) {
 	for _, r := range [][5]float64{
 		{3.5, 97.5, 0.03, 0.04, -1.5569322074919425498}, {3.5, 97.5, 0.2, 0.20000000093132259, -31.478434894269293009},
@@ -249,7 +251,8 @@ func TestBetaEdges(t *testing.T) {
 		{betaOdds(3, 5, 0), 1}, {betaOdds(3, 5, 1), 0}, {betaOdds(3, 5, -2), 1}, {betaOdds(3, 5, 7), 0},
 		{betaLineOdds(3, 5, 2, 9, 1, 1), 0}, {betaLineOdds(3, 5, 2, 9, 1, -1), 1}, {betaLineOdds(3, 5, 2, 9, -1, 2), 0},
 		{betaLineOdds(3, 5, 2, 9, -1, 0), 1}, {betaWindowOdds(3, 5, 0.5, 0.5), 0}, {betaWindowOdds(3, 5, -1, 2), 1},
-		{betaLargestOdds([]float64{3, 4}, []float64{5, 6}, 0, 1), 0}, {betaLargestOdds([]float64{3, 4}, []float64{5, 6}, 0, -1), 1},
+		{betaLargestOdds([]float64{3, 4}, []float64{5, 6}, 0, 1), 0},
+		{betaLargestOdds([]float64{3, 4}, []float64{5, 6}, 0, -1), 1},
 	} {
 		if c.o.LogFor != math.Log(c.want) || c.o.LogAgainst != math.Log(1-c.want) {
 			t.Errorf("%v, want P = %v", c.o, c.want)

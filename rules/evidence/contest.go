@@ -116,17 +116,12 @@ func (c *contest) logSomeBeyond(x float64) float64 {
 	return log1mexp(none)
 }
 
-// lay prepares the span (lo, hi) with z = x + shift.
+// lay prepares the span of x where both x and z = x + shift are in the support; the ends' distances
+// are the shift itself.
 func (c *contest) lay(lo, hi, shift float64) {
-	c.span = span{lo: lo, width: hi - lo, loQ: 1 - lo, x0: lo, q1: math.Max(1-hi, 0), slope: 1, beta: !c.laws[0].gamma}
-	c.span.z0 = math.Max(lo+shift, 0)
-	c.span.w1 = math.Max((1-hi)-shift, 0)
-	if hi < 1 {
-		c.span.w1 = 0
-	}
-	if lo > 0 {
-		c.span.z0 = 0
-	}
+	forth, back := math.Max(shift, 0), math.Max(-shift, 0)
+	c.span = span{lo: lo, width: hi - lo, loQ: 1 - lo, x0: back, q1: forth, z0: forth, w1: back,
+		slope: 1, beta: !c.laws[0].gamma}
 }
 
 // step is the width in which the peak is sought: the narrowest law's, in logits or logarithms.
@@ -187,6 +182,9 @@ func (c *contest) logChallengers(u float64) float64 {
 			continue
 		}
 		tail := c.logTail(j, z, q)
+		if math.IsInf(tail, -1) {
+			return tail
+		}
 		product += tail
 		sum = logSum(sum, c.laws[j].logDensity(z*c.rates[j], q)-tail)
 	}

@@ -84,7 +84,8 @@ func exactGammaAbove(a1, a2 int, r1, r2, d float64) *big.Float {
 // Logarithms of window probabilities by mpmath's integral of the density with 60 digits.
 func TestGammaWindow(t *testing.T) {
 	for _, r := range [][5]float64{
-		{12.5, 100.0, 0.1, 0.15, -0.64906082160984687954}, {12.5, 100.0, 0.5, 0.5000000009313226, -39.935328216178952857},
+		{12.5, 100.0, 0.1, 0.15, -0.64906082160984687954},
+		{12.5, 100.0, 0.5, 0.5000000009313226, -39.935328216178952857},
 		{900.5, 100.0, 7.0, 7.5, -16.742790852971626126}, {0.5, 10.0, 1e-06, 1.5e-06, -7.1284823357256259132},
 		{40.5, 2.0, 30.0, 31.0, -6.3815918969683993622},
 	} {
@@ -127,7 +128,8 @@ func TestGammaLineProperties(t *testing.T) {
 		if scaled := gammaLineOdds(a1, 8*r1, a2, 8*r2, 1, d/8); !alike(o, scaled) {
 			t.Fatalf("%v, with exposure in eighths %v", o, scaled)
 		}
-		if ratio, tiny := gammaLineOdds(a1, r1, a2, r2, 1, 0), gammaLineOdds(a1, r1, a2, r2, 1, 1e-25*a1/r1); !alike(ratio, tiny) {
+		ratio, tiny := gammaLineOdds(a1, r1, a2, r2, 1, 0), gammaLineOdds(a1, r1, a2, r2, 1, 1e-25*a1/r1)
+		if !alike(ratio, tiny) {
 			t.Fatalf("ratio %v, difference %v", ratio, tiny)
 		}
 	})

@@ -40,6 +40,9 @@ const (
 // at is the integrand as factor e^logarithm: what would only be put into the logarithm to be taken
 // out again stays outside.
 func (g *integrand) at(u float64) (logarithm, factor float64) {
+	if math.Abs(u) > farthest && g.spread == nil {
+		return math.Inf(-1), 1
+	}
 	switch g.kind {
 	case densityTimesTail:
 		return g.densityTimesTail(u)
@@ -102,12 +105,14 @@ const (
 	maxHalvings = 10
 	negligible  = 1e-18
 	slowRate    = 4
+	// Beyond farthest a place is not apart from the end of its span in float64.
+	farthest = 700
 )
 
-// agreement is the relative difference of two sums at which the second is taken. Of a pair the narrower density is
-// integrated and of two sides the rarer, so nothing in the integrand is narrower than its peak and
-// the error of the second sum is the square of the difference; a contest may have a law with a narrow
-// step far from the peak, which the difference has to show itself.
+// agreement is the relative difference of two sums at which the second is taken. Of a pair the narrower
+// density is integrated, and of two sides the rarer, so nothing in the integrand is narrower than its
+// peak and the error of the second sum is the square of the difference; a contest may have a law with
+// a narrow step far from the peak, which the difference has to show itself.
 func (g *integrand) agreement() float64 {
 	if g.many != nil {
 		return 1e-12
@@ -133,7 +138,10 @@ func (g *integrand) term(m *mapping, t float64) float64 {
 		rate += e
 	}
 	l, f := g.at(m.at + u)
-	return rate * f * math.Exp(l-m.top)
+	if l -= m.top; l < -800 {
+		return 0
+	}
+	return rate * f * math.Exp(l)
 }
 
 // sweep sums the terms at k h, outwards on both sides until they are negligible.

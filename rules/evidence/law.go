@@ -154,6 +154,9 @@ func (l *law) tailAt(x, q float64, above bool) (logarithm, factor float64) {
 // tail is the tail for which there is a positive expansion, as ratio e^f, and which it is.
 func (l *law) tail(x, q, lambda, d float64) (f, ratio float64, isBelow bool) {
 	f = l.logScale - d
+	if !(d <= math.MaxFloat64) {
+		return math.Inf(-1), 1, lambda > 0
+	}
 	if l.reach > 0 {
 		w := math.Sqrt(2 * d)
 		switch {

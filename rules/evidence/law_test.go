@@ -66,14 +66,12 @@ func TestLawTails(t *testing.T) {
 // The density of logit X integrates to the tails' difference: the window by its integral and by
 // the tails where these do not cancel.
 func TestWindowAgainstTails(t *testing.T) {
-	for _, l := range []law{betaLaw(3.5, 97.5), betaLaw(0.5, 0.5), betaLaw(4e5, 6e5), gammaLaw(0.5), gammaLaw(44), gammaLaw(1e6)} {
-		mean := l.a / (l.a + 1)
-		sd := 0.1
+	for _, l := range []law{betaLaw(3.5, 97.5), betaLaw(0.5, 0.5), betaLaw(4e5, 6e5),
+		gammaLaw(0.5), gammaLaw(44), gammaLaw(1e6)} {
+		mean, sd := l.a, math.Sqrt(l.a)
 		if !l.gamma {
 			mean = l.a / l.n
 			sd = math.Sqrt(mean * (l.b / l.n) / (l.n + 1))
-		} else {
-			mean, sd = l.a, math.Sqrt(l.a)
 		}
 		lo, hi := math.Max(mean-2*sd, mean/10), mean+1.5*sd
 		if !l.gamma {

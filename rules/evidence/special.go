@@ -62,6 +62,9 @@ func polynomial(c []float64, x float64) float64 {
 // Relative error a few ulp. TestDeviance.
 func deviance(ratio, t float64) float64 {
 	if t < -0.4 || t > 0.6 {
+		if t > math.MaxFloat64 {
+			return t
+		}
 		return t - math.Log(ratio)
 	}
 	u := t / (2 + t)
@@ -217,7 +220,8 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 }
 
 // normalQuantile is z with 1 - Phi(z) = p for 0 < p < 1 and q = 1-p given beside it, so
-// that neither end loses digits (in the middle 1/2 - p is exact): Newton's method on log(1-Phi) from the two-term asymptote.
+// that neither end loses digits (in the middle 1/2 - p is exact): Newton's method on log(1-Phi) from the
+// two-term asymptote. TestNormalQuantile.
 func normalQuantile(p, q float64) float64 {
 	if p > q {
 		return -normalQuantile(q, p)
