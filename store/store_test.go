@@ -9,7 +9,7 @@ import (
 	"testing"
 	"time"
 
-	bolt "go.etcd.io/bbolt"
+	bolterrors "go.etcd.io/bbolt/errors"
 	"pgregory.net/rapid"
 
 	"steelyard/rules"
@@ -160,7 +160,7 @@ func TestFirstErrorIsTheLast(t *testing.T) {
 		t.Fatal(err)
 	}
 	first := s.Commit(step(s, 1))
-	if !errors.Is(first, ErrStorage) || !errors.Is(first, bolt.ErrDatabaseNotOpen) {
+	if !errors.Is(first, ErrStorage) || !errors.Is(first, bolterrors.ErrDatabaseNotOpen) {
 		t.Fatalf("%v", first)
 	}
 	if _, err := s.Pieces(); err != first {

@@ -59,8 +59,7 @@ type value struct {
 	kind     Kind // empty for a constant
 	terms    []Term
 	constant float64
-	extreme  Form // Largest or Smallest: terms are the arguments of max or min
-	isMax    bool
+	isMax    bool    // of the form Largest, before it is known what stands against it: max, not min
 	scale    float64 // of an absolute value or a ratio: its sign and factor
 	column   int
 }

@@ -156,9 +156,6 @@ func (c *meansAt) beyond(x float64) float64 {
 	return hi + lo
 }
 
-// certain says whether nothing is uncertain about the combination.
-func (c *meansAt) certain() bool { return c.one.scale == 0 && c.two.scale == 0 }
-
 // above is the odds of the combination lying above x.
 func (c *meansAt) above(x float64) Odds {
 	d := c.beyond(x)
