@@ -42,10 +42,10 @@ func (c *contest) logEvent() float64 {
 	if c.smallest {
 		// All the others are above x-tolerance for certain where that is below 0.
 		if c.tolerance > 0 {
-			outer, _ = c.logTails(c.which, c.tolerance)
+			outer, _ = c.logTails(c.which, place{c.tolerance, 1 - c.tolerance})
 		}
-	} else if hi < c.top {
-		_, outer = c.logTails(c.which, hi)
+	} else if c.tolerance < 0 && c.top == 1 {
+		_, outer = c.logTails(c.which, place{hi, -c.tolerance})
 	}
 	if lo >= hi {
 		return outer
@@ -63,10 +63,10 @@ func (c *contest) logContrary() float64 {
 	if c.smallest {
 		// X_which is above z+tolerance for certain where that is below 0: the smallest is there.
 		if lo > 0 {
-			outer = c.logSomeBeyond(lo)
+			outer = c.logSomeBeyond(place{lo, 1 - lo})
 		}
-	} else if hi < c.top {
-		outer = c.logSomeBeyond(hi)
+	} else if c.tolerance > 0 && c.top == 1 {
+		outer = c.logSomeBeyond(place{hi, c.tolerance})
 	}
 	if lo >= hi {
 		return outer
@@ -94,20 +94,15 @@ func (c *contest) mean(j int) place {
 	return place{l.a / l.n, l.b / l.n}
 }
 
-// logSomeBeyond is the logarithm of the probability that some other is on the far side of x.
-func (c *contest) logSomeBeyond(x float64) float64 {
-	if x >= c.top {
-		if c.smallest {
-			return 0
-		}
-		return math.Inf(-1)
-	}
+// logSomeBeyond is the logarithm of the probability that some other is on the far side of a place inside the
+// support.
+func (c *contest) logSomeBeyond(at place) float64 {
 	none := 0.0
 	for j := range c.n {
 		if j == c.which {
 			continue
 		}
-		below, above := c.logTails(j, x)
+		below, above := c.logTails(j, at)
 		if c.smallest {
 			below = above
 		}
@@ -152,8 +147,8 @@ func (c *contest) falls() (left, right float64) {
 	return left, right
 }
 
-func (c *contest) logTails(j int, x float64) (below, above float64) {
-	return c.laws[j].logTails(x*c.rates[j], 1-x)
+func (c *contest) logTails(j int, at place) (below, above float64) {
+	return c.laws[j].logTails(at.x*c.rates[j], at.q)
 }
 
 // logWinner is the logarithm of f_w(x) prod_j F_j(z) dx/du.

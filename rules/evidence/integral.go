@@ -21,6 +21,8 @@ type integrand struct {
 
 	// How the integrand falls off: at the least as exp(leftRate u) and exp(-rightRate u).
 	leftRate, rightRate float64
+	// Outside of these it falls off just so.
+	leftBend, rightBend float64
 
 	// Where there are two peaks.
 	twoPeaks bool    // there is a second peak,
@@ -84,7 +86,7 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 	h := 0.8 * scale / (1 + m.left + m.right)
 	sum, left, right := g.sweep(&m, h)
 	// Where the logarithms are large, their rounding shows.
-	enough := g.agreement() + 1e-15*math.Abs(top)
+	enough := g.agreement(&m) + 1e-15*math.Abs(top)
 	for range maxHalvings {
 		odd := 0.0
 		for k := -left; k < right; k++ {
@@ -111,13 +113,15 @@ const (
 
 // agreement is the relative difference of two sums at which the second is taken. Of a pair the narrower
 // density is integrated, and of two sides the rarer, so nothing in the integrand is narrower than its
-// peak and the error of the second sum is the square of the difference; a contest may have a law with
-// a narrow step far from the peak, which the difference has to show itself.
-func (g *integrand) agreement() float64 {
-	if g.many != nil {
+// peak and the error of the second sum is the square of the difference. Two things have to show in the
+// difference itself: a narrow step of some law of a contest, and a bend far out where the mapping has
+// made the steps long.
+func (g *integrand) agreement(m *mapping) float64 {
+	const near = 3
+	if g.many != nil || m.left > 0 && m.at-g.leftBend > near || m.right > 0 && g.rightBend-m.at > near {
 		return 1e-12
 	}
-	return 1e-8
+	return 1e-9
 }
 
 // A mapping is u = at + t + left (1 - e^-t) + right (e^t - 1): where the integrand falls off slowly, the sum
@@ -187,19 +191,20 @@ func (g *integrand) peak(start, width float64) (at, top, scale float64) {
 			fa = g.logAt(a)
 		}
 	}
-	// Halve the wider side until the integrand has not fallen by more than e^-2 at either end.
-	for i := 0; i < 60 && (fx-fa > 2 || fx-fb > 2); i++ {
+	// Halve the wider side until the integrand has not fallen by more than e^-2 at either end, nor rises
+	// between (two points equally far down the two flanks look flat too).
+	for i, flat := 0, false; i < 80 && !flat; i++ {
 		left := x-a > b-x
-		if fx-fa <= 2 {
-			left = false
-		} else if fx-fb <= 2 {
-			left = true
+		low, high := fx-fa > 2, fx-fb > 2
+		if low != high {
+			left = low
 		}
 		next := 0.5 * (x + b)
 		if left {
 			next = 0.5 * (x + a)
 		}
 		fn := g.logAt(next)
+		flat = !low && !high && fn <= fx
 		switch {
 		case fn > fx && left:
 			b, fb, x, fx = x, fx, next, fn

@@ -173,7 +173,7 @@ func (p *pair) logProbability(above bool) float64 {
 }
 
 // rates is how fast the integrand falls off at the span's ends: the density as x^a, or as the stretch itself
-// where the end is not the support's; and the tail as z^a where it ends there in 0.
+// where the end is not the support's; and the tail as z^a where it ends there in 0. And from where.
 func (p *pair) rates(g *integrand, above bool) {
 	s := &g.span
 	g.leftRate, g.rightRate = 1, 1
@@ -195,6 +195,22 @@ func (p *pair) rates(g *integrand, above bool) {
 	}
 	if above && s.w1 == 0 {
 		*one += p.z.b
+	}
+	// The other factor has its own end a little way beyond that of the span.
+	left, right := math.Max(s.x0, s.z0/math.Abs(s.slope)), math.Max(s.q1, s.w1/math.Abs(s.slope))
+	if s.slope < 0 {
+		left, right = math.Max(s.x0, -s.w1/s.slope), math.Max(s.q1, -s.z0/s.slope)
+	}
+	g.leftBend, g.rightBend = math.Inf(1), math.Inf(-1)
+	width := s.width
+	if math.IsInf(width, 1) {
+		width = 1
+	}
+	if left > 0 {
+		g.leftBend = math.Log(left / width)
+	}
+	if right > 0 {
+		g.rightBend = -math.Log(right / width)
 	}
 }
 
