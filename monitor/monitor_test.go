@@ -308,3 +308,44 @@ func TestSentAgain(t *testing.T) {
 	drop(t, folder, "new.csv", rows("L1", 0, 6, 33))
 	d.until("it is counted under a new name", func(s *Status) bool { return s.Sources[0].Counted == 1 })
 }
+
+// Asking while no daemon runs does not pass for watching: the stretch without a daemon begins
+// where the daemon ended, not where somebody asked.
+func TestAskingIsNotWatching(t *testing.T) {
+	cfg := plant(t, twoLines)
+	now := time.Date(2026, 3, 2, 10, 0, 0, 0, time.UTC)
+	clock := func() time.Time { return now }
+	open := func() *Desk {
+		d, err := Open(cfg, Options{Log: zerolog.Nop(), Now: clock})
+		if err != nil {
+			t.Fatal(err)
+		}
+		return d
+	}
+	ends := func(d *Desk, in time.Duration) {
+		now = now.Add(in)
+		if err := d.Close(); err != nil {
+			t.Fatal(err)
+		}
+	}
+	d := open()
+	if err := d.begin(); err != nil {
+		t.Fatal(err)
+	}
+	ends(d, time.Hour) // without end(): as a killed daemon, but for the store
+	d = open()
+	st, err := d.Status()
+	if err != nil || st.LastAlive.Hour() != 10 {
+		t.Errorf("last alive %v, %v", st.LastAlive, err)
+	}
+	ends(d, time.Hour)
+	d = open()
+	if err := d.begin(); err != nil {
+		t.Fatal(err)
+	}
+	log, err := d.DayLog("")
+	if err != nil || len(log.Gaps) != 1 || log.Gaps[0].To.Sub(log.Gaps[0].From) != 2*time.Hour || !strings.Contains(log.Gaps[0].Why, "without order") {
+		t.Errorf("gaps: %+v, %v", log.Gaps, err)
+	}
+	ends(d, 0)
+}

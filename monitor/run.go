@@ -76,6 +76,9 @@ func (d *Desk) begin() error {
 	if _, err := d.commitOne(rules.Event{Started: &rules.Started{Program: Program(), Host: host, LastAlive: last, Clean: clean}}); err != nil {
 		return err
 	}
+	if err := d.store.Alive(d.now()); err != nil {
+		return err
+	}
 	if err := d.Adopt(); err != nil {
 		return err
 	}
@@ -96,7 +99,7 @@ func (d *Desk) end(failed error) error {
 	for i := range d.cfg.Feeds {
 		d.deliverOnce(ctx, i)
 	}
-	return nil
+	return d.store.Ended(d.now())
 }
 
 // knownFiles is what has been dealt with, for the watchers, which ask of every file they see.

@@ -71,9 +71,9 @@ func (s *State) standing(c *Characteristic, line string) Standing {
 	q, err := s.Centre(name)
 	switch {
 	case err != nil:
-		st.Why = err.Error()
+		st.Why = strings.TrimPrefix(err.Error(), name+": ")
 	case !finite(q.Median, q.Lower, q.Upper):
-		st.Why = "the data and the prior do not yet bound it"
+		st.Why = posterior.ErrImproper.Error()
 	default:
 		st.Estimate = &q
 	}

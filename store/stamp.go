@@ -13,38 +13,43 @@ import (
 	bolt "go.etcd.io/bbolt"
 )
 
-// stampName is a small file beside the store that says when a program was last known to be
-// watching, and whether it ended in order. It is not synced: after a power cut an older one
-// serves.
+// stampName is a small file beside the store that says whether the store was closed in order,
+// and when a daemon was last known to be watching. It is not synced: after a power cut an
+// older one serves.
 const stampName = "alive"
 
 type stamp struct {
-	Alive time.Time `json:"alive"`
-	Clean bool      `json:"clean"`
+	Open    bool      `json:"open"`           // a program has the store, or ended without order
+	Alive   time.Time `json:"alive,omitzero"` // a daemon was watching
+	Orderly bool      `json:"orderly"`        // and then ended in order
 }
 
 func (s *Store) readStamp() error {
-	text, err := os.ReadFile(filepath.Join(s.folder, stampName))
+	path := filepath.Join(s.folder, stampName)
+	text, err := os.ReadFile(path)
 	if errors.Is(err, fs.ErrNotExist) {
 		return nil
 	}
-	var st stamp
-	if err == nil && json.Unmarshal(text, &st) != nil {
-		// A power cut may leave it empty: nothing is known but that the end was not in order.
-		st = stamp{Alive: time.Unix(0, 0)}
-		if info, e := os.Stat(filepath.Join(s.folder, stampName)); e == nil {
-			st.Alive = info.ModTime()
+	if err == nil && json.Unmarshal(text, &s.stamp) != nil {
+		// A power cut may leave it empty: then its own time is the best that is known.
+		s.stamp = stamp{Open: true}
+		if info, err := os.Stat(path); err == nil {
+			s.stamp.Alive = info.ModTime().UTC()
 		}
 	}
 	if err != nil {
 		return fmt.Errorf("%w: %w", ErrStorage, err)
 	}
-	s.lastAlive, s.clean = st.Alive.UTC(), st.Clean
+	s.before = s.stamp
 	return nil
 }
 
-func (s *Store) writeStamp(at time.Time, clean bool) error {
-	text, err := json.Marshal(stamp{at.UTC(), clean})
+// restamp changes the stamp and writes it.
+func (s *Store) restamp(change func(*stamp)) error {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	change(&s.stamp)
+	text, err := json.Marshal(s.stamp)
 	if err != nil {
 		return err
 	}
@@ -58,12 +63,19 @@ func (s *Store) writeStamp(at time.Time, clean bool) error {
 	return nil
 }
 
-// Alive notes that the program is watching at a moment.
-func (s *Store) Alive(at time.Time) error { return s.writeStamp(at, false) }
+// Alive notes that a daemon is watching at a moment.
+func (s *Store) Alive(at time.Time) error {
+	return s.restamp(func(st *stamp) { st.Alive, st.Orderly = at.UTC(), false })
+}
 
-// LastAlive is when the program before this one was last known to be watching, and whether it
-// had ended in order; zero where there was none.
-func (s *Store) LastAlive() (at time.Time, clean bool) { return s.lastAlive, s.clean }
+// Ended notes that a daemon stopped watching, in order.
+func (s *Store) Ended(at time.Time) error {
+	return s.restamp(func(st *stamp) { st.Alive, st.Orderly = at.UTC(), true })
+}
+
+// LastAlive is when the daemon before this program was last known to be watching, and whether
+// it had ended in order; zero where there was none.
+func (s *Store) LastAlive() (at time.Time, orderly bool) { return s.before.Alive, s.before.Orderly }
 
 // renew checks a store that was not closed in order and copies it to a fresh file, so that
 // every page is read and written anew: after a failed sync the pages on the disk may not be

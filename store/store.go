@@ -70,11 +70,11 @@ type Store struct {
 	folder    string
 	db        *bolt.DB
 	origin    string
-	lastAlive time.Time
-	clean     bool
+	before    stamp // as it was found
 	recovered string
 
-	mu     sync.Mutex // guards what follows, for as long as it takes to read or set it
+	mu     sync.Mutex // guards what follows, for as long as it takes to read, set or stamp it
+	stamp  stamp
 	next   uint64
 	failed error
 }
@@ -116,7 +116,7 @@ func (s *Store) open(o Options) (err error) {
 	if err = s.readStamp(); err != nil {
 		return err
 	}
-	if !s.clean && !s.lastAlive.IsZero() {
+	if s.before.Open {
 		if err = s.renew(path, o.Wait); err != nil {
 			return err
 		}
@@ -124,7 +124,7 @@ func (s *Store) open(o Options) (err error) {
 	if err = s.guard("open", s.prepare); err != nil {
 		return err
 	}
-	return s.writeStamp(time.Now(), false)
+	return s.restamp(func(st *stamp) { st.Open = true })
 }
 
 // openFile opens the bbolt file with the options that RELIABILITY of a record asks for: a
@@ -188,7 +188,7 @@ func newUUID() string {
 func (s *Store) Close() error {
 	err := s.db.Close()
 	if s.failure() == nil && err == nil {
-		return s.writeStamp(time.Now(), true)
+		return s.restamp(func(st *stamp) { st.Open = false })
 	}
 	return err
 }

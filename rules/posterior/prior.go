@@ -85,15 +85,14 @@ func (p Prior) Posterior(f Family, s Sums) Posterior {
 }
 
 // ErrImproper is wrapped by what Proper returns.
-var ErrImproper = errors.New("the data and the prior do not bound it yet")
+var ErrImproper = errors.New("too little is known yet")
 
 // Proper is nil where the posterior is a distribution that can be weighed.
 func (p Posterior) Proper() error {
 	switch p.Family {
 	case NormalFamily, LognormalFamily:
 		if !(p.Nu > 0) || !(p.K > 0) {
-			return fmt.Errorf("%w: more than one unit is needed under the reference prior, there is the weight of %v",
-				ErrImproper, p.K)
+			return fmt.Errorf("%w: %v units, and more than one is needed under the reference prior", ErrImproper, p.K)
 		}
 	case BinomialFamily:
 		if !(p.A > 0) || !(p.B > 0) {
