@@ -3,6 +3,7 @@ package monitor
 import (
 	"context"
 	"encoding/json"
+	"errors"
 	"fmt"
 	"os"
 	"path/filepath"
@@ -235,8 +236,21 @@ func TestHostileFiles(t *testing.T) {
 		t.Fatal(err)
 	}
 	pipe(t, filepath.Join(folder, "pipe.csv"))
+	giant := filepath.Join(folder, ".giant")
+	if err := os.WriteFile(giant, []byte("Line,Serial,Head kPa\n"), 0o644); err != nil {
+		t.Fatal(err)
+	}
+	if err := errors.Join(os.Truncate(giant, 100<<20), os.Rename(giant, filepath.Join(folder, "giant.csv"))); err != nil {
+		t.Fatal(err)
+	}
+	for i := range 20 { // some are gone before, some while they are read
+		gone := filepath.Join(folder, fmt.Sprintf("gone%d.csv", i))
+		if err := errors.Join(os.WriteFile(gone, nil, 0o644), os.Remove(gone)); err != nil {
+			t.Fatal(err)
+		}
+	}
 	drop(t, folder, "mixed.csv", good+"L1,7,33,2\n")
-	d.until("all are dealt with", func(s *Status) bool { return s.Sources[0].Held >= 18 && s.Sources[0].Counted == 1 })
+	d.until("all are dealt with", func(s *Status) bool { return s.Sources[0].Held >= 19 && s.Sources[0].Counted == 1 })
 	log, err := d.DayLog("")
 	if err != nil {
 		t.Fatal(err)
@@ -249,7 +263,7 @@ func TestHostileFiles(t *testing.T) {
 		"empty.csv": "the file is empty", "header.csv": "no row", "nan.csv": `column 3 ("Head kPa"): read "NaN"`, "inf.csv": `read "Inf"`,
 		"huge.csv": "float64", "hex.csv": `read "0x1p3"`, "column.csv": `did you mean "Haed kPa"`, "quote.csv": "not closed", "nul.csv": "zero byte",
 		"group.csv": `read "1,234"`, "gross.csv": "plausible", "line.csv": `read the line "L9"`, "fields.csv": "read 4 fields", "long.csv": "more than 1048576 bytes",
-		"link.csv": "symbolic link", "folder.csv": "folder", "pipe.csv": "pipe", "mixed.csv": "line 5",
+		"link.csv": "symbolic link", "folder.csv": "folder", "pipe.csv": "pipe", "mixed.csv": "line 5", "giant.csv": "104857600 bytes",
 	} {
 		if !strings.Contains(reasons[file], want) || !strings.Contains(reasons[file], file) {
 			t.Errorf("%s: %q, want it to say %q", file, reasons[file], want)

@@ -2,6 +2,7 @@ package main
 
 import (
 	"context"
+	"errors"
 	"fmt"
 	"io"
 	"os"
@@ -12,48 +13,74 @@ import (
 	"github.com/rs/zerolog"
 
 	"steelyard/monitor"
+	"steelyard/monitor/config"
 	"steelyard/rules"
 )
 
 type runVerb struct{}
 
-// Run watches until a signal ends it: the first ends in order, the second at once.
+// Run watches until a signal ends it: the first ends in order, the second at once. SIGHUP reads
+// the configuration again; one with faults leaves the old one in force.
 func (v *runVerb) Run(d *desk) error {
 	cfg, err := d.configuration()
 	if err != nil {
 		return err
 	}
 	log := d.daemonLog()
+	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
+	context.AfterFunc(ctx, stop) // a second signal ends the program at once
+	defer stop()
+	reload := make(chan os.Signal, 1)
+	signal.Notify(reload, syscall.SIGHUP)
+	defer signal.Stop(reload)
+	for {
+		next, err := d.watch(ctx, cfg, reload, log)
+		if err != nil || next == nil {
+			return err
+		}
+		cfg = next
+	}
+}
+
+// watch runs the daemon under one configuration, until the context ends or another, sound one is
+// to take its place.
+func (d *desk) watch(ctx context.Context, cfg *config.Config, reload <-chan os.Signal, log zerolog.Logger) (next *config.Config, err error) {
 	m, err := monitor.Open(cfg, monitor.Options{Log: log})
 	if err != nil {
-		return err
+		return nil, err
 	}
 	log.Info().Str("program", monitor.Program()).Str("configuration", cfg.File).Str("state", cfg.Site.State).
 		Int("sources", len(cfg.Sources)).Int("rules", len(cfg.Plan.Rules)).Msg("watching begins; " + rules.ReleaseNote)
 	for _, s := range cfg.Sources {
 		log.Info().Str("source", s.Name).Str("folder", s.Folder).Str("files", s.Files).Msg("source")
 	}
-	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
-	context.AfterFunc(ctx, stop) // a second signal ends the program at once
-	defer stop()
-	ready := make(chan struct{})
-	go func() {
+	running, end := context.WithCancel(ctx)
+	defer end()
+	ready, done := make(chan struct{}), make(chan error, 1)
+	go func() { done <- m.Run(running, ready) }()
+	for waiting := true; waiting; {
 		select {
 		case <-ready:
 			log.Info().Msg("ready")
-		case <-ctx.Done():
+			ready = nil
+		case <-reload:
+			if next, err = config.Load(cfg.File); err != nil {
+				next = nil
+				log.Error().Err(err).Msg("the new configuration is NOT in force; the old one stays")
+				continue
+			}
+			log.Info().Msg("a new configuration takes the place of the old one")
+			end()
+		case err = <-done:
+			waiting = false
 		}
-	}()
-	err = m.Run(ctx, ready)
+	}
 	if err != nil {
 		log.Error().Err(err).Msg("STOPPED: nothing is counted any more")
 	} else {
 		log.Info().Msg("ended in order")
 	}
-	if closed := m.Close(); err == nil {
-		err = closed
-	}
-	return err
+	return next, errors.Join(err, m.Close())
 }
 
 // daemonLog writes for people on a terminal, and JSON otherwise.
