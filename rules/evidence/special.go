@@ -143,10 +143,10 @@ var millsFit = [...]float64{
 	1.73275789432351038e-10,
 }
 
-// normalDensity is phi(z), the rounding of z^2 put right.
+// normalDensity is phi(z).
 func normalDensity(z float64) float64 {
 	const invRoot2Pi = 0.398942280401432677939946059934381868
-	return invRoot2Pi * math.Exp(-normalExponent(z))
+	return float64(invRoot2Pi * math.Exp(-normalExponent(z)))
 }
 
 // normalExponent is z^2/2.
@@ -158,7 +158,7 @@ func normalTail(z float64) float64 {
 		if z > 40 {
 			return 0
 		}
-		return mills(z) * normalDensity(z)
+		return float64(mills(z) * normalDensity(z))
 	}
 	return 1 - normalTail(-z)
 }
