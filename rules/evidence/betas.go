@@ -4,7 +4,7 @@ import "math"
 
 // betaOdds is the odds of X > x for X ~ Beta(a, b): one incomplete beta function, the rarer side by
 // a positive expansion (law). x beyond (0, 1) is certain either way.
-// TestPublicCases, TestPublished, TestLawTails.
+// TestPublicCases, TestPublishedBetas, TestLawTails.
 func betaOdds(a, b, x float64) Odds {
 	if x <= 0 || x >= 1 {
 		return certain(x <= 0)
@@ -15,7 +15,8 @@ func betaOdds(a, b, x float64) Odds {
 	return Odds{LogFor: above, LogAgainst: below}
 }
 
-// betaWindowOdds is the odds of lo < X < hi for X ~ Beta(a, b).
+// betaWindowOdds is the odds of lo < X < hi for X ~ Beta(a, b), also of narrow windows deep in a tail.
+// TestBetaWindow, TestWindowAgainstTails.
 func betaWindowOdds(a, b, lo, hi float64) Odds {
 	l := betaLaw(a, b)
 	return l.windowOdds(lo, hi, 1)
@@ -25,7 +26,8 @@ func betaWindowOdds(a, b, lo, hi float64) Odds {
 // X2 ~ Beta(a2, b2): the integral of the narrower one's density times the other's tail over the
 // stretch where that tail is neither 0 nor 1, in the log-odds of the place in the stretch,
 // where nothing is singular nearer than pi to the real line (logIntegral). Each side positive.
-// Any slope and offset. TestPublicCases, TestSweepPairs.
+// Any slope and offset; parameters from 0.05 on (below, part of the law lies beneath the smallest float64).
+// TestPublicCases, TestSweepPairs, TestBetaLineExactSums, TestBetaLineProperties.
 func betaLineOdds(a1, b1, a2, b2, slope, offset float64) Odds {
 	if slope == 0 {
 		return betaOdds(a1, b1, offset)
@@ -51,7 +53,7 @@ func lineOdds(one, two *law, rate1, rate2, slope, offset, mean1, mean2, sd1, sd2
 }
 
 // betaLargestOdds is the odds of X_which - max of the others > tolerance, X_i ~ Beta(a[i], b[i])
-// independent (contest). TestPublicCases, TestLargestSums.
+// independent (contest); up to 64, parameters from 0.05 on. TestPublicCases, TestBetaLargest.
 func betaLargestOdds(a, b []float64, which int, tolerance float64) Odds {
 	c := betaContest(a, b, which, tolerance)
 	return c.odds()
@@ -65,8 +67,8 @@ func betaContest(a, b []float64, which int, tolerance float64) contest {
 	return c
 }
 
-// betaSmallestOdds is the odds of X_which - min of the others > tolerance: in 1-X the contrary of
-// max of the others - X_which < ... with the tolerance's sign turned.
+// betaSmallestOdds is the odds of X_which - min of the others > tolerance: for 1-X it is the contrary of the
+// largest, with the tolerance's sign turned. TestBetaLargest.
 func betaSmallestOdds(a, b []float64, which int, tolerance float64) Odds {
 	return betaLargestOdds(b, a, which, -tolerance).against()
 }

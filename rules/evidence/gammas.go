@@ -3,7 +3,7 @@ package evidence
 import "math"
 
 // gammaOdds is the odds of X > x for X ~ Gamma(shape) with the given rate: one incomplete gamma
-// function, the rarer side by a positive expansion (law). TestPublished, TestLawTails.
+// function, the rarer side by a positive expansion (law). TestPublishedGammas, TestLawTails.
 func gammaOdds(shape, rate, x float64) Odds {
 	if !(x > 0) {
 		return certain(true)
@@ -16,7 +16,7 @@ func gammaOdds(shape, rate, x float64) Odds {
 	return Odds{LogFor: above, LogAgainst: below}
 }
 
-// gammaWindowOdds is the odds of lo < X < hi.
+// gammaWindowOdds is the odds of lo < X < hi. TestGammaWindow, TestWindowAgainstTails.
 func gammaWindowOdds(shape, rate, lo, hi float64) Odds {
 	l := gammaLaw(shape)
 	return l.windowOdds(rate*lo, rate*hi, math.Inf(1))
@@ -25,7 +25,8 @@ func gammaWindowOdds(shape, rate, lo, hi float64) Odds {
 // gammaLineOdds is the odds of X1 > slope X2 + offset for independent X_i ~ Gamma(shape_i) of rate_i. With
 // offset 0 (a ratio of rates) it is one incomplete beta function: G1/(G1+G2) ~ Beta(shape1, shape2);
 // else the integral of betaLineOdds, over a half-line where the line rises.
-// TestPublicCases, TestSweepPairs.
+// Shapes from 0.05 on where the offset is not 0. TestPublicCases, TestSweepPairs, TestGammaLineExactSums,
+// TestGammaLineProperties.
 func gammaLineOdds(shape1, rate1, shape2, rate2, slope, offset float64) Odds {
 	if slope == 0 || offset == 0 && slope < 0 {
 		return gammaOdds(shape1, rate1, offset)
@@ -62,7 +63,8 @@ func betaRatioOddsLow(a, b, w, wLow, v float64) Odds {
 	return Odds{LogFor: above, LogAgainst: below}
 }
 
-// gammaLargestOdds is the odds of X_which - max of the others > tolerance (contest).
+// gammaLargestOdds is the odds of X_which - max of the others > tolerance (contest); up to
+// 64, shapes from 0.05 on. TestGammaLargest.
 func gammaLargestOdds(shape, rate []float64, which int, tolerance float64) Odds {
 	c := gammaContest(shape, rate, which, tolerance)
 	return c.odds()

@@ -86,7 +86,7 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 	h := 0.8 * scale / (1 + m.left + m.right)
 	sum, left, right := g.sweep(&m, h)
 	// Where the logarithms are large, their rounding shows.
-	enough := g.agreement(&m) + 1e-15*math.Abs(top)
+	enough := g.agreement(&m) + float64(1e-15*math.Abs(top))
 	for range maxHalvings {
 		odd := 0.0
 		for k := -left; k < right; k++ {
@@ -121,7 +121,10 @@ func (g *integrand) agreement(m *mapping) float64 {
 	if g.many != nil || m.left > 0 && m.at-g.leftBend > near || m.right > 0 && g.rightBend-m.at > near {
 		return 1e-12
 	}
-	return 1e-9
+	if g.spread != nil {
+		return 1e-9
+	}
+	return 2e-8
 }
 
 // A mapping is u = at + t + left (1 - e^-t) + right (e^t - 1): where the integrand falls off slowly, the sum
@@ -180,7 +183,7 @@ func (g *integrand) peak(start, width float64) (at, top, scale float64) {
 	a, fa := x-step, g.logAt(x-step)
 	b, fb := x+step, g.logAt(x+step)
 	for i := 0; i < 200 && !(fx >= fa && fx >= fb); i++ {
-		step *= 1.7
+		step = float64(1.7 * step)
 		if fb > fa {
 			a, fa, x, fx = x, fx, b, fb
 			b = x + step

@@ -41,7 +41,7 @@ const (
 
 func betaLaw(a, b float64) law {
 	l := law{a: a, b: b, n: a + b}
-	l.logScale = stirling(l.n) - stirling(a) - stirling(b) - logRoot2Pi + 0.5*math.Log(a/l.n*b)
+	l.logScale = stirling(l.n) - stirling(a) - stirling(b) - logRoot2Pi + float64(0.5*math.Log(a/l.n*b))
 	if a >= smoothFrom && b >= smoothFrom {
 		l.expand(a/l.n*b, (b-a)/l.n, 1/l.n)
 		l.reach = 0.7 * math.Sqrt(a/l.n*b)
@@ -51,7 +51,7 @@ func betaLaw(a, b float64) law {
 
 func gammaLaw(a float64) law {
 	l := law{a: a, b: math.Inf(1), n: math.Inf(1), gamma: true}
-	l.logScale = -stirling(a) - logRoot2Pi + 0.5*math.Log(a)
+	l.logScale = -stirling(a) - logRoot2Pi + float64(0.5*math.Log(a))
 	if a >= smoothFrom {
 		l.expand(a, 1, 0)
 		l.reach = 0.7 * math.Sqrt(a)
@@ -271,7 +271,7 @@ func gammaFraction(a, x float64) float64 {
 		b += 2
 		d = 1 / (float64(an*d) + b)
 		c = b + an/c
-		step := c * d
+		step := float64(c * d)
 		r *= step
 		if math.Abs(step-1) <= 2e-16 {
 			break
@@ -298,7 +298,7 @@ func (l *law) logHighOfSmall(x, q, top float64) float64 {
 			}
 		}
 	}
-	return math.Log(0.5*span/panels*sum + math.Exp(l.logBeyond(top, mirrored)))
+	return math.Log(float64(0.5*span/panels*sum) + math.Exp(l.logBeyond(top, mirrored)))
 }
 
 // densityInLog is the density of log V, V = X or 1-X.
@@ -360,7 +360,7 @@ func (l *law) logBetween(lo, hi float64) float64 {
 	}
 	panels := math.Ceil(width / math.Min(1, math.Sqrt(1/l.a+1/l.b)))
 	f := func(y float64) float64 {
-		o := odds * math.Exp(y)
+		o := float64(odds * math.Exp(y))
 		if l.gamma {
 			return l.logDensity(o, 0)
 		}

@@ -50,7 +50,7 @@ func (s *span) at(u float64) (x, q, z, w, rate float64) {
 func (s *span) coordinate(at place) float64 {
 	p := at.x - s.lo
 	if math.IsInf(s.width, 1) {
-		return math.Log(math.Max(p, 1e-3*at.x+1e-300))
+		return math.Log(math.Max(p, float64(1e-3*at.x)+1e-300))
 	}
 	if s.beta && s.lo > 0.5 {
 		p = s.loQ - at.q
@@ -276,7 +276,7 @@ func (p *pair) logX(at place, isBelow bool) float64 {
 		}
 		return math.Inf(-1)
 	}
-	x, q, low := at.x*p.rateX, at.q, 0.0
+	x, q, low := float64(at.x*p.rateX), at.q, 0.0
 	if p.top == 1 {
 		// The nearer end's distance is the exact one.
 		if x < 0.5 {

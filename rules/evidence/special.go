@@ -68,7 +68,7 @@ func deviance(ratio, t float64) float64 {
 		return t - math.Log(ratio)
 	}
 	u := t / (2 + t)
-	v := u * u
+	v := float64(u * u)
 	series := devianceSeries[:]
 	if v < 0.008 {
 		series = series[:7]
@@ -143,14 +143,14 @@ var millsFit = [...]float64{
 	1.73275789432351038e-10,
 }
 
-// normalDensity is phi(z), the rounding of z^2 put right.
+// normalDensity is phi(z).
 func normalDensity(z float64) float64 {
 	const invRoot2Pi = 0.398942280401432677939946059934381868
-	return invRoot2Pi * math.Exp(-normalExponent(z))
+	return float64(invRoot2Pi * math.Exp(-normalExponent(z)))
 }
 
 // normalExponent is z^2/2.
-func normalExponent(z float64) float64 { return 0.5 * float64(z*z) }
+func normalExponent(z float64) float64 { return float64(0.5 * float64(z*z)) }
 
 // normalTail is 1 - Phi(z).
 func normalTail(z float64) float64 {
@@ -158,7 +158,7 @@ func normalTail(z float64) float64 {
 		if z > 40 {
 			return 0
 		}
-		return mills(z) * normalDensity(z)
+		return float64(mills(z) * normalDensity(z))
 	}
 	return 1 - normalTail(-z)
 }
@@ -200,9 +200,9 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 	case lo <= -0.5:
 		// The middle is inside: both tails together are below 0.62.
 		return 0, 1 - (normalTail(-lo) + normalTail(hi))
-	case lo > 0 && d*(lo+0.5*d) > 1:
+	case lo > 0 && d*(lo+float64(0.5*d)) > 1:
 		f := mills(lo)
-		if fall := d * (lo + 0.5*d); fall < 45 {
+		if fall := d * (lo + float64(0.5*d)); fall < 45 {
 			f -= float64(math.Exp(-fall) * mills(hi))
 		}
 		return -normalExponent(lo) - logRoot2Pi, f
@@ -214,7 +214,7 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 	s := 0.0
 	for i, x := range legendreNodes {
 		r, l := half*(1+x), half*(1-x)
-		s = math.FMA(legendreWeights[i], math.Exp(-r*(lo+0.5*r))+math.Exp(-l*(lo+0.5*l)), s)
+		s = math.FMA(legendreWeights[i], float64(math.Exp(-r*(lo+float64(0.5*r))))+float64(math.Exp(-l*(lo+float64(0.5*l)))), s)
 	}
 	return -normalExponent(lo) - logRoot2Pi, half * s
 }
@@ -230,10 +230,11 @@ func normalQuantile(p, q float64) float64 {
 		return normalCentre(0.5 - p)
 	}
 	l := math.Log(p)
-	z := math.Sqrt(math.Max(0.1, -2*l-1.8379-math.Log(math.Max(1, -2*l-1.8379))))
+	t := float64(-2*l) - 1.8379
+	z := math.Sqrt(math.Max(0.1, t-math.Log(math.Max(1, t))))
 	for range 20 {
 		m := mills(z)
-		step := (math.Log(m) - normalExponent(z) - logRoot2Pi - l) * m
+		step := float64((math.Log(m) - normalExponent(z) - logRoot2Pi - l) * m)
 		z += step
 		if math.Abs(step) < 1e-9*z {
 			// The last step was below 1e-9; the next one would be below its square.

@@ -6,7 +6,7 @@ import (
 	"steelyard/rules/posterior"
 )
 
-// sdOdds is the odds of sigma > x, SS/sigma^2 ~ chi-squared(nu): a gamma tail. TestPublished.
+// sdOdds is the odds of sigma > x, SS/sigma^2 ~ chi-squared(nu): a gamma tail. TestSDClosedForms.
 func sdOdds(ss, nu, x float64) Odds {
 	switch {
 	case x < 0 || x == 0 && ss > 0:
@@ -20,7 +20,8 @@ func sdOdds(ss, nu, x float64) Odds {
 }
 
 // sdRatioOdds is the odds of sigma1/sigma2 > r: chi2/(chi1+chi2) ~ Beta(nu2/2, nu1/2), one
-// incomplete beta function. TestPublicCases, TestPublished, TestSweepRatios.
+// incomplete beta function, its point formed from exact products. Any nu > 0. TestPublicCases,
+// TestPublishedSD, TestSDClosedForms.
 func sdRatioOdds(ss1, nu1, ss2, nu2, r float64) Odds {
 	switch {
 	case r < 0 || r == 0 && ss1 > 0 || ss2 == 0 && ss1 > 0 && !math.IsInf(r, 1):
@@ -110,10 +111,10 @@ func logPair(x float64) (hi, lo float64) {
 	uLow := (math.FMA(-u, den, m-1) - float64(u*denLow)) / den
 	v := u * u
 	series := 2 * u * v * polynomial(devianceSeries[:], v)
-	a, b := float64(k)*ln2Hi, 2*u
+	a, b := float64(float64(k)*ln2Hi), float64(2*u)
 	hi = a + b
 	bb := hi - a
-	lo = (a - (hi - bb)) + (b - bb) + (float64(float64(k)*ln2Lo) + (2*uLow + series))
+	lo = (a - (hi - bb)) + (b - bb) + (float64(float64(k)*ln2Lo) + (float64(2*uLow) + float64(series)))
 	sum := hi + lo
 	return sum, (hi - sum) + lo
 }
@@ -143,7 +144,7 @@ func (c *spreadCurve) solve(rho float64) (s, rate float64) {
 	r := math.Exp(-2 * rho * (v + rho))
 	if r < 1e-9 {
 		// Q(v+2rho) is r times Q(v) and less: one step of Newton's is exact to r^2.
-		v += r * mills(v+2*rho)
+		v += float64(r * mills(v+float64(2*rho)))
 		return v + rho, 1 - 2*r
 	}
 	v = math.Min(v+math.Log1p(r)/c.hazard, c.s0)
@@ -153,7 +154,7 @@ func (c *spreadCurve) solve(rho float64) (s, rate float64) {
 		m := mills(v) + float64(r*mills(v+2*rho))
 		d := (math.Log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
 		bend := (1+r)/m - (v+float64(r*(v+2*rho)))/(1+r)
-		step := d / (1 + 0.5*float64(d*bend))
+		step := d / (1 + float64(0.5*float64(d*bend)))
 		v += step
 		if math.Abs(step) <= 1e-6*(0.01+v) {
 			break
@@ -256,8 +257,9 @@ func (c *spreadCurve) odds(claimRare bool) Odds {
 
 // outsideOdds is the odds of F < fraction, F = Phi((L-mu)/sigma) + Phi((mu-U)/sigma) the part of the process
 // beyond its limits; for lognormal of the logarithms. One limit: an integral over log sigma (the
-// noncentral t law in a form that keeps both tails); two: spreadCurve. TestPublicCases,
-// TestTolerance, TestSweepSpread.
+// noncentral t law in a form that keeps both tails); two: spreadCurve. Any fraction, K and nu > 0; for nu to
+// 1e6 within 1e-11 (measured 1e-12), beyond that the rounding of SS and the limits shows first.
+// TestPublicCases, TestTolerance, TestSweepSpread, TestLognormalLimits.
 func outsideOdds(p *Process, fraction float64) Odds {
 	if !(fraction > 0) || fraction >= 1 {
 		return certain(fraction >= 1)
@@ -274,13 +276,14 @@ func outsideOdds(p *Process, fraction float64) Odds {
 		return c.odds(s*math.Min(c.upper, c.lower) < c.v)
 	}
 	if c.s0 = normalCentre(0.5 * (1 - fraction)); fraction < 0.6 {
-		c.s0 = normalQuantile(0.5*fraction, 1-0.5*fraction)
+		c.s0 = normalQuantile(0.5*fraction, 1-float64(0.5*fraction))
 	}
 	return c.odds(normalTail(s*c.upper)+normalTail(s*c.lower) >= fraction)
 }
 
-// capabilityOdds is the odds of min((U-mu)/(3 sigma), (mu-L)/(3 sigma)) > c for any c. TestPublicCases,
-// TestSweepSpread.
+// capabilityOdds is the odds of min((U-mu)/(3 sigma), (mu-L)/(3 sigma)) > c for any c: a plain
+// integral over log sigma for one limit or c <= 0, else spreadCurve. TestPublicCases, TestSweepSpread,
+// TestSpreadProperties.
 func capabilityOdds(p *Process, c float64) Odds {
 	if math.IsInf(c, 0) {
 		return certain(c < 0)
