@@ -66,12 +66,16 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 	return 1, 0.1
 }
 
-// quantile is the x at which log(P(q < x)/P(q > x)) is logit, by regula falsi with the
-// Illinois rule inside a bracket that is widened first.
+// farOdds bounds the logarithms of odds that the search looks at: e^40 is far beyond the ends of
+// the interval, and the shape beyond would only lead a secant astray.
+const farOdds = 40
+
+// quantile is the x at which log(P(q < x)/P(q > x)) is logit: inside a bracket that is widened
+// first, by regula falsi with the Illinois rule, every third step being a bisection.
 func quantile(c *claim.Claim, p []Process, logit, start, scale float64) float64 {
 	f := func(x float64) float64 {
 		o := above(c, p, x)
-		return math.Max(math.Min(o.LogAgainst-o.LogFor, 1e6), -1e6) - logit
+		return math.Max(math.Min(o.LogAgainst-o.LogFor, farOdds), -farOdds) - logit
 	}
 	lo, hi, fLo, fHi := bracket(f, start, scale)
 	if math.IsInf(lo, 0) {
@@ -80,40 +84,31 @@ func quantile(c *claim.Claim, p []Process, logit, start, scale float64) float64 
 	if math.IsInf(hi, 0) {
 		return hi
 	}
-	for range 200 {
-		if fLo == 0 {
-			return lo
-		}
-		if fHi == 0 {
-			return hi
-		}
+	moved := 0 // which end moved last: -1 lo, 1 hi
+	for step := range 300 {
 		x := hi - fHi*(hi-lo)/(fHi-fLo)
-		if !(x > lo && x < hi) {
+		if step%3 == 2 || !(x > lo && x < hi) {
 			x = lo + (hi-lo)/2
 		}
 		fx := f(x)
-		if math.Abs(fx) < 1e-13 || hi-lo < 4e-16*math.Max(math.Abs(lo), math.Abs(hi)) {
+		if math.Abs(fx) < 1e-13 || x <= lo || x >= hi || hi-lo < 4e-16*math.Max(math.Abs(lo), math.Abs(hi)) {
 			return x
 		}
 		if fx < 0 {
-			if lo, fLo = x, fx; fHi > 0 {
-				fHi = pull(fHi, fx)
+			lo, fLo = x, fx
+			if moved < 0 {
+				fHi /= 2
 			}
+			moved = -1
 		} else {
-			if hi, fHi = x, fx; fLo < 0 {
-				fLo = pull(fLo, fx)
+			hi, fHi = x, fx
+			if moved > 0 {
+				fLo /= 2
 			}
+			moved = 1
 		}
 	}
 	return lo + (hi-lo)/2
-}
-
-// pull halves the value at the end that stays, so that both ends move.
-func pull(stay, moved float64) float64 {
-	if math.Abs(moved) > math.Abs(stay)/2 || math.Abs(stay) > 1e3 {
-		return stay / 2
-	}
-	return stay
 }
 
 // bracket finds two places between which f, which grows, passes 0.

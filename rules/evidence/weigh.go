@@ -24,11 +24,16 @@ func Weigh(c *claim.Claim, p []Process) (Odds, error) {
 	return above(c, p, c.Bound).against(), nil
 }
 
+// weakest is the least parameter of a Beta or gamma law of which two can be compared: below it,
+// part of the law lies under the smallest float64.
+const weakest = 0.05
+
 // weighable says why a claim can't be weighed now; nil where it can.
 func weighable(c *claim.Claim, p []Process) error {
 	if len(p) != len(c.Processes) {
 		return fmt.Errorf("the claim %s speaks of %d processes, and %d are given", c, len(c.Processes), len(p))
 	}
+	paired := (c.Kind == claim.Proportion || c.Kind == claim.Rate) && len(c.Terms) > 1
 	for i := range p {
 		if err := p[i].Proper(); err != nil {
 			return fmt.Errorf("%s: %w", c.Processes[i], err)
@@ -36,6 +41,10 @@ func weighable(c *claim.Claim, p []Process) error {
 		f := p[i].Family
 		if (f == posterior.NormalFamily || f == posterior.LognormalFamily) && !(p[i].SS > 0) {
 			return fmt.Errorf("%s: all its values are the same, so its spread is zero; look at the gauge or its rounding", c.Processes[i])
+		}
+		if paired && !(p[i].A >= weakest && (f == posterior.PoissonFamily || p[i].B >= weakest)) {
+			return fmt.Errorf("%s: its prior is too weak to compare it with another before more is counted; parameters of at least %v are needed",
+				c.Processes[i], weakest)
 		}
 	}
 	return nil
