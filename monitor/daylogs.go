@@ -10,6 +10,7 @@ import (
 
 	"steelyard/monitor/daylog"
 	"steelyard/rules"
+	"steelyard/store"
 )
 
 // DayLog makes the log of a production day, written as 2026-03-02; today's where label is
@@ -108,7 +109,10 @@ func replaceFile(path string, content []byte) (err error) {
 	if err = errors.Join(err, temp.Close()); err != nil {
 		return err
 	}
-	return os.Rename(temp.Name(), path)
+	if err = os.Rename(temp.Name(), path); err != nil {
+		return err
+	}
+	return store.SyncFolder(filepath.Dir(path))
 }
 
 // lookBack is how far a starting daemon goes back for day logs that were never written.

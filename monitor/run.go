@@ -21,6 +21,7 @@ import (
 const (
 	mostTogether  = 64
 	bytesTogether = 32 << 20
+	fewWait       = 8 // arrivals between the watchers and the writer
 )
 
 // aliveEvery is how often a daemon notes that it is watching, and so how exactly a stretch
@@ -51,7 +52,7 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	for i := range d.cfg.Feeds {
 		helpers.Go(func() { d.deliver(ctx, i) })
 	}
-	arrivals := make(chan intake.Arrival, mostTogether)
+	arrivals := make(chan intake.Arrival, fewWait) // each holds the content of a file
 	for i := range d.cfg.Sources {
 		src := &d.cfg.Sources[i]
 		helpers.Go(func() { intake.Watch(ctx, src, &d.cfg.Plan, known.of(src.Name), arrivals) })

@@ -95,7 +95,7 @@ func (s *Store) renew(path string, wait time.Duration) error {
 		err = os.Rename(fresh, path)
 	}
 	if err == nil {
-		err = syncFolder(s.folder)
+		err = SyncFolder(s.folder)
 	}
 	if err != nil {
 		return fmt.Errorf("the store in %s was not closed in order and can't be renewed; restore a copy, or move the folder away and begin a new one: %w",
@@ -143,7 +143,9 @@ func copyTo(db *bolt.DB, path string) error {
 	return errors.Join(err, file.Close())
 }
 
-func syncFolder(folder string) error {
+// SyncFolder makes the names in a folder as durable as the content of its files. A system that
+// can't sync a folder says so, and needs no telling.
+func SyncFolder(folder string) error {
 	dir, err := os.Open(folder)
 	if err != nil {
 		return err

@@ -33,6 +33,7 @@ type commandLine struct {
 	Acknowledge acknowledgeVerb `cmd:"" help:"Answer an alarm."`
 	Explain     explainVerb     `cmd:"" help:"Show what an alarm rests on."`
 	Daylog      daylogVerb      `cmd:"" help:"Write the log of a production day."`
+	Weigh       weighVerb       `cmd:"" help:"Weigh a claim once, on given figures."`
 }
 
 // desk carries what the verbs need from the outside.

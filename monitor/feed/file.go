@@ -8,6 +8,8 @@ import (
 	"io"
 	"os"
 	"path/filepath"
+
+	"steelyard/store"
 )
 
 // File is a feed of kind "file": JSON lines, one message a line, each synced to the disk
@@ -48,7 +50,7 @@ func (f *File) Deliver(_ context.Context, messages [][]byte) (err error) {
 		return fmt.Errorf("feed file: %w", err)
 	}
 	if errors.Is(statErr, os.ErrNotExist) {
-		return syncFolder(filepath.Dir(f.Path))
+		return store.SyncFolder(filepath.Dir(f.Path))
 	}
 	return nil
 }
@@ -72,18 +74,4 @@ func endOfLines(file *os.File) (int64, error) {
 		size = from
 	}
 	return 0, nil
-}
-
-// syncFolder makes a new file's name as durable as its content. Systems that can't sync a
-// folder say so, and need no telling.
-func syncFolder(folder string) error {
-	dir, err := os.Open(folder)
-	if err != nil {
-		return err
-	}
-	defer dir.Close()
-	if err := dir.Sync(); err != nil && !errors.Is(err, errors.ErrUnsupported) && !errors.Is(err, os.ErrInvalid) {
-		return fmt.Errorf("feed folder %s: %w", folder, err)
-	}
-	return nil
 }

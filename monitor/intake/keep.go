@@ -8,6 +8,8 @@ import (
 	"io/fs"
 	"os"
 	"path/filepath"
+
+	"steelyard/store"
 )
 
 // Keep puts a copy of a held file's content into a folder of the program's own, synced, under
@@ -38,5 +40,5 @@ func Keep(folder string, sha [32]byte, content []byte) (string, error) {
 	if err != nil {
 		return "", errors.Join(fmt.Errorf("keep a held file: %w", err), os.Remove(file.Name()))
 	}
-	return name, nil
+	return name, store.SyncFolder(folder)
 }

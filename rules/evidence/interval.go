@@ -4,6 +4,7 @@ import (
 	"math"
 
 	"steelyard/rules/claim"
+	"steelyard/rules/posterior"
 )
 
 // logit975 is log(0.975/0.025): the odds at the ends of the central 95 % interval.
@@ -16,9 +17,29 @@ func Estimate(c *claim.Claim, p []Process) (Interval, error) {
 	if err := weighable(c, p); err != nil {
 		return Interval{}, err
 	}
+	if m, ok := symmetric(c, p); ok {
+		upper := quantile(c, p, logit975, m.centre, math.Hypot(m.one.scale, m.two.scale))
+		return Interval{Median: m.centre, Lower: m.centre - m.beyond(upper), Upper: upper}, nil
+	}
 	start, scale := guess(c, p)
 	q := func(logit float64) float64 { return quantile(c, p, logit, start, scale) }
 	return Interval{Median: q(0), Lower: q(-logit975), Upper: q(logit975)}, nil
+}
+
+// symmetric gives the law of a quantity that is symmetric about its centre: its median is the
+// centre, and its interval reaches as far down as up.
+func symmetric(c *claim.Claim, p []Process) (m meansAt, ok bool) {
+	if c.Form != claim.Linear {
+		return m, false
+	}
+	one := &p[c.Terms[0].Process]
+	switch {
+	case c.Kind == claim.Mean || c.Kind == claim.Bias:
+		return combination(c, p), true
+	case c.Kind == claim.Next && one.Family == posterior.NormalFamily:
+		return next(one), true
+	}
+	return m, false
 }
 
 // guess is a place and a scale from which to look for the quantiles; they decide how many
@@ -27,15 +48,8 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 	one := &p[c.Terms[0].Process]
 	switch c.Kind {
 	case claim.Mean, claim.Bias:
-		if c.Form == claim.Linear {
-			m := combination(c, p)
-			return m.centre, math.Hypot(m.one.scale, m.two.scale)
-		}
 		return 0, one.M/1e3 + meanOf(one).scale
 	case claim.Next:
-		if m := next(one); one.Family == "normal" {
-			return m.centre, m.one.scale
-		}
 		return math.Exp(one.M), math.Exp(one.M)
 	case claim.Median:
 		if c.Form == claim.Ratio {

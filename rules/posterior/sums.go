@@ -92,3 +92,10 @@ func (s Sums) Units(f Family) float64 {
 	}
 	return s.N
 }
+
+// FromSummary are the sums of n values with an average and a standard deviation of divisor n-1
+// (for lognormal, of natural logarithms).
+func FromSummary(n, mean, sd float64) Sums {
+	ss := twoProduct(sd, sd).mul(pair{hi: n - 1})
+	return Sums{N: n, Mean: mean, SS: ss.hi, SSLow: ss.lo}
+}
