@@ -7,6 +7,7 @@ import (
 	"io/fs"
 	"os"
 	"path/filepath"
+	"runtime"
 	"strconv"
 	"time"
 
@@ -14,8 +15,8 @@ import (
 )
 
 // stampName is a small file beside the store that says whether the store was closed in order,
-// and when a daemon was last known to be watching. It is not synced: after a power cut an
-// older one serves.
+// and when a daemon was last known to be watching. That a program has the store is synced;
+// the rest is not: after a power cut an older one serves.
 const stampName = "alive"
 
 type stamp struct {
@@ -24,10 +25,13 @@ type stamp struct {
 	Orderly bool      `json:"orderly"`        // and then ended in order
 }
 
-func (s *Store) readStamp() error {
+// readStamp reads the stamp. A store that existed and has none was not closed in order, as
+// far as can be told.
+func (s *Store) readStamp(existed bool) error {
 	path := filepath.Join(s.folder, stampName)
 	text, err := os.ReadFile(path)
 	if errors.Is(err, fs.ErrNotExist) {
+		s.before = stamp{Open: existed}
 		return nil
 	}
 	if err == nil && json.Unmarshal(text, &s.stamp) != nil {
@@ -63,6 +67,28 @@ func (s *Store) restamp(change func(*stamp)) error {
 	return nil
 }
 
+// stampOpen notes on the disk that a program has the store.
+func (s *Store) stampOpen() error {
+	err := s.restamp(func(st *stamp) { st.Open = true })
+	if err == nil {
+		if err = syncFile(filepath.Join(s.folder, stampName)); err == nil {
+			err = syncFolder(s.folder)
+		}
+		if err != nil {
+			err = fmt.Errorf("%w: %w", ErrStorage, err)
+		}
+	}
+	return err
+}
+
+func syncFile(path string) error {
+	file, err := os.OpenFile(path, os.O_RDWR, 0)
+	if err != nil {
+		return err
+	}
+	return errors.Join(file.Sync(), file.Close())
+}
+
 // Alive notes that a daemon is watching at a moment.
 func (s *Store) Alive(at time.Time) error {
 	return s.restamp(func(st *stamp) { st.Alive, st.Orderly = at.UTC(), false })
@@ -79,23 +105,30 @@ func (s *Store) LastAlive() (at time.Time, orderly bool) { return s.before.Alive
 
 // renew checks a store that was not closed in order and copies it to a fresh file, so that
 // every page is read and written anew: after a failed sync the pages on the disk may not be
-// those in memory, and only a new file is certain.
+// those in memory, and only a new file is certain. The copy is checked before it takes the
+// place of the old one, which stays locked until then.
 func (s *Store) renew(path string, wait time.Duration) error {
 	fresh := path + ".fresh"
 	err := s.guard("check after an end without order", func() error {
 		if err := check(s.db); err != nil {
 			return err
 		}
-		return copyTo(s.db, fresh)
+		if err := copyTo(s.db, fresh); err != nil {
+			return err
+		}
+		return checkCopy(fresh)
 	})
-	if err == nil {
-		err = s.db.Close()
+	if err == nil && runtime.GOOS == "windows" {
+		err = s.db.Close() // an open file can't be replaced there
 	}
 	if err == nil {
 		err = os.Rename(fresh, path)
 	}
 	if err == nil {
 		err = SyncFolder(s.folder)
+	}
+	if err == nil {
+		err = s.db.Close()
 	}
 	if err != nil {
 		return fmt.Errorf("the store in %s was not closed in order and can't be renewed; restore a copy, or move the folder away and begin a new one: %w",
@@ -108,6 +141,14 @@ func (s *Store) renew(path string, wait time.Duration) error {
 	s.db = db
 	s.recovered = "the store had not been closed in order; it was checked, found sound and copied to a fresh file"
 	return nil
+}
+
+func checkCopy(path string) error {
+	db, err := bolt.Open(path, 0o600, &bolt.Options{ReadOnly: true, Timeout: time.Second})
+	if err != nil {
+		return err
+	}
+	return errors.Join(check(db), db.Close())
 }
 
 // check reads the whole file.

@@ -5,7 +5,7 @@
 // Buckets, their keys and values. Numbers in keys are 8 bytes, big-endian, so that they sort;
 // strings in composite keys end with a zero byte, which no source, feed or file name holds.
 //
-//	meta     "format"                 → "1": the version of this layout; another is refused
+//	meta     "format"                 → "2": the version of this layout; another is refused
 //	         "origin"                 → a random UUID, made with the store
 //	journal  index                    → a record (record.go)
 //	times    at (ns since 1970), index → nothing: the first record at or after a moment
@@ -26,12 +26,11 @@ import (
 	"bytes"
 	"crypto/rand"
 	"encoding/binary"
-	"encoding/json"
 	"errors"
 	"fmt"
 	"os"
 	"path/filepath"
-	"strings"
+	"runtime/debug"
 	"sync"
 	"time"
 
@@ -50,7 +49,7 @@ var ErrStorage = errors.New("storage failed")
 
 const (
 	fileName = "steelyard.db"
-	format   = "1"
+	format   = "2"
 )
 
 var (
@@ -62,6 +61,10 @@ var (
 	filesBucket    = []byte("files")
 	contentsBucket = []byte("contents")
 	outboxBucket   = []byte("outbox")
+
+	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket}
+
+	formatKey, originKey = []byte("format"), []byte("origin")
 )
 
 // Store is an open store. Commit must be called by one goroutine at a time; everything else
@@ -105,6 +108,8 @@ func Open(folder string, o Options) (*Store, error) {
 
 func (s *Store) open(o Options) (err error) {
 	path := filepath.Join(s.folder, fileName)
+	old, err := os.Stat(path)
+	existed := err == nil && old.Size() > 0
 	if s.db, err = openFile(path, o.Wait); err != nil {
 		return err
 	}
@@ -113,7 +118,7 @@ func (s *Store) open(o Options) (err error) {
 			err = errors.Join(err, s.db.Close())
 		}
 	}()
-	if err = s.readStamp(); err != nil {
+	if err = s.readStamp(existed); err != nil {
 		return err
 	}
 	if s.before.Open {
@@ -121,59 +126,89 @@ func (s *Store) open(o Options) (err error) {
 			return err
 		}
 	}
-	if err = s.guard("open", s.prepare); err != nil {
+	found := format
+	if err = s.guard("open", func() (err error) {
+		found, err = s.prepare()
+		return err
+	}); err != nil {
 		return err
 	}
-	return s.restamp(func(st *stamp) { st.Open = true })
-}
-
-// openFile opens the bbolt file with the options that RELIABILITY of a record asks for: a
-// synced freelist, a lock that is not waited for for ever, and room to grow without waiting
-// for readers.
-func openFile(path string, wait time.Duration) (*bolt.DB, error) {
-	db, err := bolt.Open(path, 0o600, &bolt.Options{
-		Timeout: wait, FreelistType: bolt.FreelistMapType, InitialMmapSize: initialMap,
-	})
-	switch {
-	case errors.Is(err, bolterrors.ErrTimeout):
-		return nil, fmt.Errorf("%w in %s; only one daemon can watch with one state folder", ErrHeld, filepath.Dir(path))
-	case err != nil:
-		return nil, fmt.Errorf("%w: open %s: %w", ErrStorage, path, err)
+	if found != format {
+		return fmt.Errorf("the store in %s has format %q and this program reads %q; use the program that wrote it", s.folder, found, format)
 	}
-	return db, nil
+	return s.stampOpen()
 }
 
-// prepare makes the buckets and reads what is needed at all times.
-func (s *Store) prepare() error {
-	err := s.db.Update(func(tx *bolt.Tx) error {
-		for _, name := range [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket} {
+// openFile opens the bbolt file: with a freelist that is synced, a lock that is not waited
+// for for ever, and room to grow without waiting for readers. Who waited for the lock may
+// have got that of a file that renew has replaced since: then it opens the new one.
+func openFile(path string, wait time.Duration) (db *bolt.DB, err error) {
+	defer func() {
+		if p := recover(); p != nil {
+			err = fmt.Errorf("%w: open %s: the file is damaged: %v", ErrStorage, path, p)
+		}
+	}()
+	for {
+		var locked *os.File
+		db, err = bolt.Open(path, 0o600, &bolt.Options{
+			Timeout: wait, FreelistType: bolt.FreelistMapType, InitialMmapSize: initialMap,
+			OpenFile: func(name string, flag int, mode os.FileMode) (file *os.File, err error) {
+				locked, err = os.OpenFile(name, flag, mode)
+				return locked, err
+			},
+		})
+		switch {
+		case errors.Is(err, bolterrors.ErrTimeout):
+			return nil, fmt.Errorf("%w in %s; only one daemon can watch with one state folder", ErrHeld, filepath.Dir(path))
+		case err != nil:
+			return nil, fmt.Errorf("%w: open %s: %w", ErrStorage, path, err)
+		}
+		mine, err := locked.Stat()
+		if err != nil {
+			return nil, errors.Join(fmt.Errorf("%w: %w", ErrStorage, err), db.Close())
+		}
+		if there, err := os.Stat(path); err == nil && os.SameFile(mine, there) {
+			return db, nil
+		}
+		if err := db.Close(); err != nil {
+			return nil, fmt.Errorf("%w: %w", ErrStorage, err)
+		}
+	}
+}
+
+// prepare makes the buckets of a new store, and reads what is needed at all times. A store of
+// another format it leaves alone.
+func (s *Store) prepare() (found string, err error) {
+	err = s.db.Update(func(tx *bolt.Tx) error {
+		if meta := tx.Bucket(metaBucket); meta != nil && meta.Get(formatKey) != nil {
+			return nil
+		}
+		for _, name := range buckets {
 			if _, err := tx.CreateBucketIfNotExists(name); err != nil {
 				return err
 			}
 		}
 		meta := tx.Bucket(metaBucket)
-		if meta.Get([]byte("format")) == nil {
-			if err := meta.Put([]byte("format"), []byte(format)); err != nil {
-				return err
-			}
-			return meta.Put([]byte("origin"), []byte(newUUID()))
+		if err := meta.Put(formatKey, []byte(format)); err != nil {
+			return err
 		}
-		return nil
+		return meta.Put(originKey, []byte(newUUID()))
 	})
 	if err != nil {
-		return err
+		return "", err
 	}
-	return s.db.View(func(tx *bolt.Tx) error {
+	err = s.db.View(func(tx *bolt.Tx) error {
 		meta := tx.Bucket(metaBucket)
-		if f := string(meta.Get([]byte("format"))); f != format {
-			return fmt.Errorf("the store in %s has format %q; this program reads %q", s.folder, f, format)
+		if found = string(meta.Get(formatKey)); found != format {
+			return nil
 		}
-		s.origin = string(meta.Get([]byte("origin")))
+		s.origin = string(meta.Get(originKey))
 		if k, _ := tx.Bucket(journalBucket).Cursor().Last(); k != nil {
 			s.next = binary.BigEndian.Uint64(k) + 1
 		}
 		return nil
 	})
+	return found, err
 }
 
 // newUUID is a random UUID (RFC 9562, version 4).
@@ -214,11 +249,13 @@ func (s *Store) failure() error {
 }
 
 // guard runs a use of the file. The first error or panic makes the store unusable: bbolt
-// panics on a damaged page.
+// panics on a damaged page, and reading the map of a file that somebody cut short faults,
+// which ends the program unless it is told to panic.
 func (s *Store) guard(what string, use func() error) (err error) {
 	if failed := s.failure(); failed != nil {
 		return failed
 	}
+	defer debug.SetPanicOnFault(debug.SetPanicOnFault(true))
 	defer func() {
 		if p := recover(); p != nil {
 			err = fmt.Errorf("the file is damaged: %v", p)
@@ -237,27 +274,6 @@ func (s *Store) guard(what string, use func() error) (err error) {
 type Entry struct {
 	Event    rules.Event
 	Outcomes rules.Outcomes
-}
-
-// FileMemory is what intake must remember of one file.
-type FileMemory struct {
-	Source  string   `json:"source"`
-	File    string   `json:"file"`
-	Size    int64    `json:"size"`
-	Written int64    `json:"written"` // modification time, ns since 1970
-	SHA256  [32]byte `json:"sha256"`
-	Index   uint64   `json:"index"`   // of the record that dealt with it
-	Counted bool     `json:"counted"` // content that stood under this name is in a batch
-	Batch   bool     `json:"-"`       // this step takes the content as a batch
-}
-
-// Message is one message in the outbox.
-type Message struct {
-	Feed   string    `json:"feed"`
-	Number uint64    `json:"number"` // given by Commit; grows
-	ID     string    `json:"id"`
-	At     time.Time `json:"at"`
-	Body   []byte    `json:"body"`
 }
 
 // Step is one step of the program.
@@ -309,18 +325,8 @@ func write(tx *bolt.Tx, step *Step) error {
 			return err
 		}
 	}
-	outbox := tx.Bucket(outboxBucket)
 	for _, m := range step.Outbox {
-		n, err := outbox.NextSequence()
-		if err != nil {
-			return err
-		}
-		m.Number = n
-		text, err := json.Marshal(m)
-		if err != nil {
-			return err
-		}
-		if err := outbox.Put(joined(m.Feed, number(n)), text); err != nil {
+		if err := writeMessage(tx, m); err != nil {
 			return err
 		}
 	}
@@ -347,22 +353,6 @@ func writeEntry(tx *bolt.Tx, e *Entry) error {
 	return nil
 }
 
-func writeFile(tx *bolt.Tx, f *FileMemory) error {
-	text, err := json.Marshal(f)
-	if err != nil {
-		return err
-	}
-	key := joined(f.Source, []byte(f.File))
-	if err := tx.Bucket(filesBucket).Put(key, text); err != nil {
-		return err
-	}
-	contents := tx.Bucket(contentsBucket)
-	if !f.Batch || contents.Get(f.SHA256[:]) != nil {
-		return nil
-	}
-	return contents.Put(f.SHA256[:], append(number(f.Index), key...))
-}
-
 // number is a number as a key.
 func number(n uint64) []byte { return binary.BigEndian.AppendUint64(nil, n) }
 
@@ -387,39 +377,68 @@ func (s *Store) view(what string, read func(*bolt.Tx) error) error {
 	return s.guard(what, func() error { return s.db.View(read) })
 }
 
-// readAtOnce is how many records one read transaction takes: a long one would keep old pages.
-const readAtOnce = 256
+// What one read transaction takes at most, but for one record: a long one would keep old pages.
+const (
+	recordsAtOnce = 256
+	bytesAtOnce   = 4 << 20
+)
 
 // Journal gives the records from one index up to another, in order, to visit; its error ends
 // the visit and is returned.
 func (s *Store) Journal(from, to uint64, visit func(rules.Event, rules.Outcomes) error) error {
-	for from < to {
-		var some []Entry
-		err := s.view("read the journal", func(tx *bolt.Tx) error {
-			c := tx.Bucket(journalBucket).Cursor()
-			for k, v := c.Seek(number(from)); k != nil && len(some) < readAtOnce; k, v = c.Next() {
-				if binary.BigEndian.Uint64(k) >= to {
-					break
-				}
-				e, err := decode(v)
-				if err != nil {
-					return fmt.Errorf("record %d: %w", binary.BigEndian.Uint64(k), err)
-				}
-				some = append(some, *e)
+	return s.Records(from, to, func(index uint64, record []byte) error {
+		var e *Entry
+		err := s.guard("read the journal", func() (err error) {
+			if e, err = decode(record); err == nil && e.Event.Index != index {
+				err = fmt.Errorf("it says that it is record %d", e.Event.Index)
+			}
+			if err != nil {
+				return fmt.Errorf("record %d: %w", index, err)
 			}
 			return nil
 		})
-		if err != nil || len(some) == 0 {
+		if err != nil {
 			return err
 		}
-		for i := range some {
-			if err := visit(some[i].Event, some[i].Outcomes); err != nil {
+		return visit(e.Event, e.Outcomes)
+	})
+}
+
+// Records gives the bytes of the records from one index up to another, in order, to visit,
+// which may keep them; its error ends the visit and is returned. A record that is missing is
+// a storage error.
+func (s *Store) Records(from, to uint64, visit func(index uint64, record []byte) error) error {
+	for to = min(to, s.Next()); from < to; {
+		var some [][]byte
+		err := s.view("read the journal", func(tx *bolt.Tx) (err error) {
+			some, err = readRecords(tx, from, to)
+			return err
+		})
+		if err != nil {
+			return err
+		}
+		for _, record := range some {
+			if err := visit(from, record); err != nil {
 				return err
 			}
+			from++
 		}
-		from = some[len(some)-1].Event.Index + 1
 	}
 	return nil
+}
+
+// readRecords copies the first records of a range, one at least.
+func readRecords(tx *bolt.Tx, from, to uint64) (some [][]byte, err error) {
+	c, size := tx.Bucket(journalBucket).Cursor(), 0
+	k, v := c.Seek(number(from))
+	for ; from < to && len(some) < recordsAtOnce && size < bytesAtOnce; from++ {
+		if k == nil || binary.BigEndian.Uint64(k) != from {
+			return nil, fmt.Errorf("record %d is missing", from)
+		}
+		some, size = append(some, bytes.Clone(v)), size+len(v)
+		k, v = c.Next()
+	}
+	return some, nil
 }
 
 // FirstAt is the index of the first record taken at or after a moment; Next where there is
@@ -447,82 +466,4 @@ func (s *Store) AlarmRecords(alarm int) (indexes []uint64, err error) {
 		return nil
 	})
 	return indexes, err
-}
-
-// File is what is remembered of a file.
-func (s *Store) File(source, file string) (f FileMemory, found bool, err error) {
-	err = s.view("find a file", func(tx *bolt.Tx) error {
-		text := tx.Bucket(filesBucket).Get(joined(source, []byte(file)))
-		if text == nil {
-			return nil
-		}
-		found = true
-		return json.Unmarshal(text, &f)
-	})
-	return f, found, err
-}
-
-// Files gives everything that is remembered of the files of a source to visit.
-func (s *Store) Files(source string, visit func(FileMemory)) error {
-	prefix := joined(source, nil)
-	return s.view("read what is known of files", func(tx *bolt.Tx) error {
-		c := tx.Bucket(filesBucket).Cursor()
-		for k, v := c.Seek(prefix); bytes.HasPrefix(k, prefix); k, v = c.Next() {
-			var f FileMemory
-			if err := json.Unmarshal(v, &f); err != nil {
-				return err
-			}
-			visit(f)
-		}
-		return nil
-	})
-}
-
-// Taken says which batch took a content first, and from where.
-func (s *Store) Taken(sha [32]byte) (index uint64, source, file string, found bool, err error) {
-	err = s.view("find a content", func(tx *bolt.Tx) error {
-		v := tx.Bucket(contentsBucket).Get(sha[:])
-		if v == nil {
-			return nil
-		}
-		found, index = true, binary.BigEndian.Uint64(v)
-		source, file, _ = strings.Cut(string(v[8:]), "\x00")
-		return nil
-	})
-	return index, source, file, found, err
-}
-
-// Pending are the oldest messages of a feed that are not delivered, at most most of them, and
-// how many there are in all.
-func (s *Store) Pending(feed string, most int) (messages []Message, all int, err error) {
-	prefix := joined(feed, nil)
-	err = s.view("read the outbox", func(tx *bolt.Tx) error {
-		c := tx.Bucket(outboxBucket).Cursor()
-		for k, v := c.Seek(prefix); bytes.HasPrefix(k, prefix); k, v = c.Next() {
-			if all++; all > most {
-				continue
-			}
-			var m Message
-			if err := json.Unmarshal(v, &m); err != nil {
-				return err
-			}
-			messages = append(messages, m)
-		}
-		return nil
-	})
-	return messages, all, err
-}
-
-// Delivered takes messages out of the outbox.
-func (s *Store) Delivered(messages []Message) error {
-	return s.guard("note a delivery", func() error {
-		return s.db.Update(func(tx *bolt.Tx) error {
-			for _, m := range messages {
-				if err := tx.Bucket(outboxBucket).Delete(joined(m.Feed, number(m.Number))); err != nil {
-					return err
-				}
-			}
-			return nil
-		})
-	})
 }

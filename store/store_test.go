@@ -10,7 +10,6 @@ import (
 	"time"
 
 	bolterrors "go.etcd.io/bbolt/errors"
-	"pgregory.net/rapid"
 
 	"steelyard/rules"
 )
@@ -183,42 +182,4 @@ func TestJournalGoesOnWithoutGaps(t *testing.T) {
 	if err := s.Commit(step(s, 1)); err != nil {
 		t.Errorf("the refusal was taken for a storage error: %v", err)
 	}
-}
-
-// A record comes back as it was written, floats bit for bit.
-func TestRecord(t *testing.T) {
-	rapid.Check(t, func(t *rapid.T) {
-		values := rapid.SliceOf(rapid.Float64()).Draw(t, "values")
-		e := &Entry{Event: rules.Event{Index: rapid.Uint64().Draw(t, "index"), At: time.Unix(0, rapid.Int64().Draw(t, "at")).UTC(),
-			Batch: &rules.Batch{File: rapid.String().Draw(t, "file"), Series: []rules.Series{{Value: values}}}}}
-		for _, v := range values {
-			if v != v || v-v != 0 {
-				return // not finite: the engine refuses it before it gets here
-			}
-		}
-		b, err := encode(e)
-		if err != nil {
-			return // a year that RFC 3339 has no name for
-		}
-		got, err := decode(b)
-		if err != nil {
-			t.Fatal(err)
-		}
-		again, err := encode(got)
-		if err != nil || !bytes.Equal(b, again) {
-			t.Fatalf("%s, then %s", b, again)
-		}
-	})
-}
-
-func FuzzDecode(f *testing.F) {
-	f.Add([]byte("\x01[{\"index\":1,\"at\":\"2026-03-02T10:00:00Z\"},{}]"))
-	f.Add([]byte("\x02"))
-	f.Fuzz(func(t *testing.T, b []byte) {
-		if e, err := decode(b); err == nil {
-			if _, err := encode(e); err != nil {
-				t.Skip("a time that can't be written again")
-			}
-		}
-	})
 }
