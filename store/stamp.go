@@ -72,7 +72,7 @@ func (s *Store) stampOpen() error {
 	err := s.restamp(func(st *stamp) { st.Open = true })
 	if err == nil {
 		if err = syncFile(filepath.Join(s.folder, stampName)); err == nil {
-			err = syncFolder(s.folder)
+			err = SyncFolder(s.folder)
 		}
 		if err != nil {
 			err = fmt.Errorf("%w: %w", ErrStorage, err)
