@@ -3,7 +3,6 @@ package store
 import (
 	"bytes"
 	"encoding/binary"
-	"encoding/json"
 	"fmt"
 	"strings"
 
@@ -11,24 +10,33 @@ import (
 )
 
 // FileMemory is what intake must remember of one file.
+//
+// Its value in the bucket is 1 for this form (a byte), whether it was counted (0 or 1, a byte),
+// Size and Written (varints of encoding/binary), Index (uvarint) and SHA256 (32 bytes). A
+// reader refuses another form.
 type FileMemory struct {
-	Source  string   `json:"source"`
-	File    string   `json:"file"`
-	Size    int64    `json:"size"`
-	Written int64    `json:"written"` // modification time, ns since 1970
-	SHA256  [32]byte `json:"sha256"`
-	Index   uint64   `json:"index"`   // of the record that dealt with it
-	Counted bool     `json:"counted"` // content that stood under this name is in a batch
-	Batch   bool     `json:"-"`       // this step takes the content as a batch
+	Source  string
+	File    string
+	Size    int64
+	Written int64 // modification time, ns since 1970
+	SHA256  [32]byte
+	Index   uint64 // of the record that dealt with it
+	Counted bool   // content that stood under this name is in a batch
+	Batch   bool   // this step takes the content as a batch; not remembered
 }
 
+const fileForm = 1
+
 func writeFile(tx *bolt.Tx, f *FileMemory) error {
-	text, err := json.Marshal(f)
-	if err != nil {
-		return err
+	b := []byte{fileForm, 0}
+	if f.Counted {
+		b[1] = 1
 	}
+	b = binary.AppendVarint(b, f.Size)
+	b = binary.AppendVarint(b, f.Written)
+	b = binary.AppendUvarint(b, f.Index)
 	key := joined(f.Source, []byte(f.File))
-	if err := tx.Bucket(filesBucket).Put(key, text); err != nil {
+	if err := tx.Bucket(filesBucket).Put(key, append(b, f.SHA256[:]...)); err != nil {
 		return err
 	}
 	contents := tx.Bucket(contentsBucket)
@@ -38,15 +46,31 @@ func writeFile(tx *bolt.Tx, f *FileMemory) error {
 	return contents.Put(f.SHA256[:], append(number(f.Index), key...))
 }
 
+// readFile reads what is remembered of a file.
+func readFile(b []byte, source, file string) (f FileMemory, err error) {
+	c := &columns{rest: b}
+	form := c.byte()
+	f = FileMemory{Source: source, File: file, Counted: c.byte() == 1, Size: c.varint(), Written: c.varint(), Index: c.uvarint()}
+	copy(f.SHA256[:], c.take(uint64(len(f.SHA256))))
+	if c.err == nil && (form != fileForm || len(c.rest) > 0) {
+		c.fail("its form is not the %d that this program reads", fileForm)
+	}
+	if c.err != nil {
+		return f, fmt.Errorf("what is remembered of %q of %s: %w", file, source, c.err)
+	}
+	return f, nil
+}
+
 // File is what is remembered of a file.
 func (s *Store) File(source, file string) (f FileMemory, found bool, err error) {
-	err = s.view("find a file", func(tx *bolt.Tx) error {
+	err = s.view("find a file", func(tx *bolt.Tx) (err error) {
 		text := tx.Bucket(filesBucket).Get(joined(source, []byte(file)))
 		if text == nil {
 			return nil
 		}
 		found = true
-		return readFile(text, source, file, &f)
+		f, err = readFile(text, source, file)
+		return err
 	})
 	return f, found, err
 }
@@ -57,24 +81,14 @@ func (s *Store) Files(source string, visit func(FileMemory)) error {
 	return s.view("read what is known of files", func(tx *bolt.Tx) error {
 		c := tx.Bucket(filesBucket).Cursor()
 		for k, v := c.Seek(prefix); bytes.HasPrefix(k, prefix); k, v = c.Next() {
-			var f FileMemory
-			if err := readFile(v, source, string(k[len(prefix):]), &f); err != nil {
+			f, err := readFile(v, source, string(k[len(prefix):]))
+			if err != nil {
 				return err
 			}
 			visit(f)
 		}
 		return nil
 	})
-}
-
-// readFile reads what is remembered of a file. Its name is that of the key, byte for byte:
-// JSON would put another in the place of one that is not UTF-8.
-func readFile(text []byte, source, file string, f *FileMemory) error {
-	if err := json.Unmarshal(text, f); err != nil {
-		return fmt.Errorf("what is remembered of %q of %s: %w", file, source, err)
-	}
-	f.Source, f.File = source, file
-	return nil
 }
 
 // Taken says which batch took a content first, and from where.

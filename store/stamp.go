@@ -108,11 +108,12 @@ func (s *Store) LastAlive() (at time.Time, orderly bool) { return s.before.Alive
 // those in memory, and only a new file is certain. The copy is checked before it takes the
 // place of the old one, which stays locked until then.
 func (s *Store) renew(path string, wait time.Duration) error {
+	if err := s.guard("check after an end without order", func() error { return check(s.db) }); err != nil {
+		return fmt.Errorf("the store in %s was not closed in order and is damaged; restore a copy, or move the folder away and begin a new one: %w",
+			s.folder, err)
+	}
 	fresh := path + ".fresh"
-	err := s.guard("check after an end without order", func() error {
-		if err := check(s.db); err != nil {
-			return err
-		}
+	err := s.guard("copy after an end without order", func() error {
 		if err := copyTo(s.db, fresh); err != nil {
 			return err
 		}
@@ -131,7 +132,8 @@ func (s *Store) renew(path string, wait time.Duration) error {
 		err = s.db.Close()
 	}
 	if err != nil {
-		return fmt.Errorf("the store in %s was not closed in order and can't be renewed; restore a copy, or move the folder away and begin a new one: %w",
+		_ = os.Remove(fresh) // so that it doesn't fill the disk; it is written anew in any case
+		return fmt.Errorf("the store in %s was not closed in order and must be copied before it is used; the disk needs as much free space as the store takes: %w",
 			s.folder, err)
 	}
 	db, err := openFile(path, wait)

@@ -11,7 +11,7 @@
 //	times    at (ns since 1970), index → nothing: the first record at or after a moment
 //	alarms   alarm number, index      → nothing: the records that changed an alarm
 //	state    name of a piece          → the piece, as the engine encoded it
-//	files    source 0 file            → FileMemory as JSON
+//	files    source 0 file            → FileMemory (files.go)
 //	contents SHA-256                  → index of the batch that took it, source 0 file
 //	outbox   feed 0 number            → Message as JSON
 //

@@ -6,10 +6,13 @@ import (
 	"errors"
 	"os"
 	"path/filepath"
+	"strings"
 	"testing"
 	"time"
 
+	bolt "go.etcd.io/bbolt"
 	bolterrors "go.etcd.io/bbolt/errors"
+	"pgregory.net/rapid"
 
 	"steelyard/rules"
 )
@@ -181,5 +184,230 @@ func TestJournalGoesOnWithoutGaps(t *testing.T) {
 	}
 	if err := s.Commit(step(s, 1)); err != nil {
 		t.Errorf("the refusal was taken for a storage error: %v", err)
+	}
+}
+
+// A store of another format is refused in words, and nothing is written to it.
+func TestOtherFormat(t *testing.T) {
+	folder := t.TempDir()
+	s := open(t, folder)
+	err := s.db.Update(func(tx *bolt.Tx) error {
+		if err := tx.DeleteBucket(outboxBucket); err != nil {
+			return err
+		}
+		return tx.Bucket(metaBucket).Put(formatKey, []byte("99"))
+	})
+	if err = errors.Join(err, s.Close()); err != nil {
+		t.Fatal(err)
+	}
+	_, err = Open(folder, Options{})
+	if err == nil || errors.Is(err, ErrStorage) || !strings.Contains(err.Error(), `"99"`) {
+		t.Errorf("%v", err)
+	}
+	db, err := bolt.Open(filepath.Join(folder, fileName), 0o600, nil)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer db.Close()
+	err = db.View(func(tx *bolt.Tx) error {
+		if tx.Bucket(outboxBucket) != nil {
+			return errors.New("a bucket was made in it")
+		}
+		return nil
+	})
+	if err != nil {
+		t.Error(err)
+	}
+}
+
+// A store whose stamp is gone can't be known to have been closed in order; one that is new
+// needs none.
+func TestStampGone(t *testing.T) {
+	folder := t.TempDir()
+	s := open(t, folder)
+	if s.Recovered() != "" {
+		t.Errorf("a new store: %s", s.Recovered())
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.Remove(filepath.Join(folder, stampName)); err != nil {
+		t.Fatal(err)
+	}
+	s = open(t, folder)
+	defer s.Close()
+	if s.Recovered() == "" {
+		t.Error("the store was taken for one closed in order")
+	}
+}
+
+// Whoever waits for the store while it is renewed gets the new file, not the lock of the old
+// one, whose content nobody would see.
+func TestWaitingWhileRenewed(t *testing.T) {
+	folder := t.TempDir()
+	path := filepath.Join(folder, fileName)
+	s := open(t, folder)
+	waited := make(chan error)
+	go func() {
+		second, err := Open(folder, Options{Wait: 10 * time.Second})
+		if err == nil {
+			err = errors.Join(second.Commit(step(second, 1)), second.Close())
+		}
+		waited <- err
+	}()
+	time.Sleep(100 * time.Millisecond) // the second waits for the lock by now
+	if err := copyTo(s.db, path+".fresh"); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.Rename(path+".fresh", path); err != nil {
+		t.Fatal(err)
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	if err := <-waited; err != nil {
+		t.Fatal(err)
+	}
+	s = open(t, folder)
+	defer s.Close()
+	if s.Next() != 1 {
+		t.Errorf("%d records: what the second committed is gone", s.Next())
+	}
+}
+
+// A file's name that is not UTF-8 comes back byte for byte.
+func TestNameNotUTF8(t *testing.T) {
+	s := open(t, t.TempDir())
+	defer s.Close()
+	st := step(s, 1)
+	st.Files[0].File = "caf\xe9.csv"
+	if err := s.Commit(st); err != nil {
+		t.Fatal(err)
+	}
+	err := s.Files("rig", func(f FileMemory) {
+		if f.File != st.Files[0].File {
+			t.Errorf("%q", f.File)
+		}
+	})
+	if err != nil {
+		t.Error(err)
+	}
+}
+
+// model is what a store must hold, kept in maps.
+type model struct {
+	records []byte // the content that each took
+	pieces  map[string]string
+	pending []string
+}
+
+// Any sequence of commits, deliveries and starts, in order or not, leaves what it says.
+func TestAgainstMaps(t *testing.T) {
+	rapid.Check(t, func(t *rapid.T) {
+		folder, err := os.MkdirTemp("", "store")
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer os.RemoveAll(folder)
+		s, err := Open(folder, Options{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer func() { s.Close() }()
+		m := model{pieces: map[string]string{}}
+		t.Repeat(map[string]func(*rapid.T){
+			"commit": func(t *rapid.T) {
+				st := m.step(t, s)
+				if err := s.Commit(st); err != nil {
+					t.Fatal(err)
+				}
+			},
+			"deliver": func(t *rapid.T) {
+				most := rapid.IntRange(0, 3).Draw(t, "most")
+				messages, all, err := s.Pending("leads", most)
+				if err != nil || all != len(m.pending) || len(messages) != min(most, all) {
+					t.Fatalf("%d of %d pending, %v; want %d", len(messages), all, err, len(m.pending))
+				}
+				if err := s.Delivered(messages); err != nil {
+					t.Fatal(err)
+				}
+				m.pending = m.pending[len(messages):]
+			},
+			"start again": func(t *rapid.T) {
+				inOrder := rapid.Bool().Draw(t, "in order")
+				end := s.Close
+				if !inOrder {
+					end = s.db.Close
+				}
+				if err := end(); err != nil {
+					t.Fatal(err)
+				}
+				if s, err = Open(folder, Options{}); err != nil {
+					t.Fatal(err)
+				}
+				if (s.Recovered() == "") != inOrder {
+					t.Fatalf("in order %v, %q", inOrder, s.Recovered())
+				}
+			},
+			"": func(t *rapid.T) { m.check(t, s) },
+		})
+	})
+}
+
+func (m *model) step(t *rapid.T, s *Store) (st Step) {
+	st.Pieces = map[string][]byte{}
+	for range rapid.IntRange(0, 3).Draw(t, "entries") {
+		one := step(s, rapid.ByteRange(0, 20).Draw(t, "content"))
+		e := &one.Entries[0].Event
+		e.Index = uint64(len(m.records))
+		e.At = time.Unix(int64(1000+e.Index), 0)
+		one.Files[0].Index = e.Index
+		m.records = append(m.records, byte(one.Files[0].Size))
+		m.pending = append(m.pending, one.Outbox[0].ID)
+		st.Entries, st.Files, st.Outbox = append(st.Entries, one.Entries...), append(st.Files, one.Files...), append(st.Outbox, one.Outbox...)
+	}
+	for _, name := range rapid.SliceOfNDistinct(rapid.SampledFrom([]string{"a", "b", "c"}), 0, 3, rapid.ID).Draw(t, "pieces") {
+		if piece := rapid.String().Draw(t, "piece"); piece == "" {
+			st.Pieces[name] = nil
+			delete(m.pieces, name)
+		} else {
+			st.Pieces[name], m.pieces[name] = []byte(piece), piece
+		}
+	}
+	return st
+}
+
+func (m *model) check(t *rapid.T, s *Store) {
+	if s.Next() != uint64(len(m.records)) {
+		t.Fatalf("next is %d after %d records", s.Next(), len(m.records))
+	}
+	first := map[byte]uint64{}
+	err := s.Journal(0, s.Next(), func(e rules.Event, _ rules.Outcomes) error {
+		content := m.records[e.Index]
+		if e.Batch.Series[0].Value[0] != float64(content) {
+			t.Fatalf("record %d: %+v", e.Index, e.Batch)
+		}
+		if _, known := first[content]; !known {
+			first[content] = e.Index
+		}
+		return nil
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	for content := range byte(20) {
+		want, known := first[content]
+		if i, _, _, found, err := s.Taken([32]byte{content}); err != nil || found != known || i != want {
+			t.Fatalf("content %d: %d %v %v, want %d %v", content, i, found, err, want, known)
+		}
+	}
+	pieces, err := s.Pieces()
+	if err != nil || len(pieces) != len(m.pieces) {
+		t.Fatalf("%v %v, want %v", pieces, err, m.pieces)
+	}
+	for name, piece := range pieces {
+		if m.pieces[name] != string(piece) {
+			t.Fatalf("piece %s: %q, want %q", name, piece, m.pieces[name])
+		}
 	}
 }
