@@ -25,6 +25,7 @@ import (
 	"crypto/sha256"
 	"encoding/hex"
 	"fmt"
+	"slices"
 	"sync"
 	"time"
 	"unicode/utf8"
@@ -63,7 +64,8 @@ type Reader struct {
 type measure struct {
 	config.Measured
 	*rules.Characteristic
-	on []bool // by index into Reader.lines: whether it is measured on that line
+	on         []bool // by index into Reader.lines: whether it is measured on that line
+	everywhere bool   // on all of them
 }
 
 // NewReader makes the reader of a source under a plan. Both must come from one checked
@@ -91,6 +93,7 @@ func NewReader(src *config.Source, plan *rules.Plan) *Reader {
 		for _, line := range r.measures[i].Lines {
 			r.measures[i].on[r.lineOf[line]] = true
 		}
+		r.measures[i].everywhere = !slices.Contains(r.measures[i].on, false)
 	}
 	if src.Columns.Line == "" {
 		var ok bool

@@ -28,6 +28,7 @@ type records struct {
 	from, to int // the current record in text, without its line end
 	fields   []span
 	undone   []byte // what is left of fields with doubled quotes
+	newline  int    // of a record with quotes: where the line that is being read ends, at LF
 }
 
 // span is a field: text[from:to], or undone[from:to] where apart is set.
@@ -79,6 +80,7 @@ func (r *records) read() (ok bool, bad *flaw) {
 			continue
 		}
 		if !r.plain && bytes.IndexByte(row, '"') >= 0 {
+			r.newline = r.pos + n
 			return true, r.quoted()
 		}
 		r.from, r.to = r.pos, r.pos+len(row)
@@ -171,16 +173,18 @@ func (r *records) passOver(at int) {
 
 // bare reads a field that is not in quotes; it returns where the field ends.
 func (r *records) bare(from int) (int, *flaw) {
-	for at := from; ; at++ {
-		switch {
-		case at == len(r.text), r.text[at] == r.comma, r.lineEnds(at):
-			r.fields = append(r.fields, span{from: from, to: at})
-			return at, nil
-		case r.text[at] == '"':
-			return at, &flaw{sentence: fmt.Sprintf("read a quote inside a field that does not begin with one; "+
-				"expected %q or the end of the row (a field that holds quotes stands in quotes itself, and has them doubled)", r.comma)}
-		}
+	to := r.newline
+	if n := bytes.IndexByte(r.text[from:to], r.comma); n >= 0 {
+		to = from + n
+	} else if to > from && r.text[to-1] == '\r' {
+		to--
 	}
+	if n := bytes.IndexByte(r.text[from:to], '"'); n >= 0 {
+		return from + n, &flaw{sentence: fmt.Sprintf("read a quote inside a field that does not begin with one; "+
+			"expected %q or the end of the row (a field that holds quotes stands in quotes itself, and has them doubled)", r.comma)}
+	}
+	r.fields = append(r.fields, span{from: from, to: to})
+	return to, nil
 }
 
 // lineEnds says whether a line ends at a place in the text.
@@ -203,7 +207,6 @@ func (r *records) inQuotes(from int) (int, *flaw) {
 		if n < 0 {
 			return len(r.text), &flaw{whole: true, sentence: "read a quote that opens a field and is not closed; expected a closing quote before the end of the file"}
 		}
-		lines += bytes.Count(r.text[at:at+n], []byte("\n"))
 		at += n
 		if at-from > longestRecord {
 			return at, &flaw{whole: true, sentence: fmt.Sprintf("read a quote that opens a field and is not closed within %d bytes; expected a closing quote", longestRecord)}
@@ -213,7 +216,15 @@ func (r *records) inQuotes(from int) (int, *flaw) {
 		}
 		at, doubled = at+2, true
 	}
-	r.next += lines
+	if at > r.newline {
+		lines = bytes.Count(r.text[from:at], []byte("\n"))
+		if r.next += lines; lines > 0 {
+			r.newline = len(r.text)
+			if n := bytes.IndexByte(r.text[at:], '\n'); n >= 0 {
+				r.newline = at + n
+			}
+		}
+	}
 	if after := at + 1; after < len(r.text) && r.text[after] != r.comma && !r.lineEnds(after) {
 		return after, &flaw{whole: lines > 0, sentence: fmt.Sprintf("read a closing quote and behind it %s; expected %q or the end of the row", quote(r.text[after:after+1]), r.comma)}
 	}

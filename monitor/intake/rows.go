@@ -38,8 +38,7 @@ type cell struct {
 // column collects the measurements of one process.
 type column struct {
 	row       []int
-	value, of []float64
-	ofMatters bool // of is not 1 throughout
+	value, of []float64 // of is empty where it is 1 throughout
 }
 
 func newDesk(r *Reader) *desk {
@@ -59,7 +58,7 @@ func (p *pass) begin() {
 	d.line, d.time, d.serials, d.ends = d.line[:0], d.time[:0], d.serials[:0], d.ends[:0]
 	for i := range d.series {
 		s := &d.series[i]
-		s.row, s.value, s.of, s.ofMatters = s.row[:0], s.value[:0], s.of[:0], false
+		s.row, s.value, s.of = s.row[:0], s.value[:0], s.of[:0]
 	}
 }
 
@@ -182,6 +181,9 @@ func (p *pass) onLine() (on int, ok bool) {
 		}
 	}
 	for i := range p.now {
+		if p.measures[i].everywhere {
+			continue
+		}
 		if m := &p.measures[i]; p.now[i].text != nil && !m.on[on] {
 			p.hold(p.at.value[i]+1, fmt.Sprintf("read %s for the line %q; expected no value, or a line on which %s is measured: %s",
 				quote(p.now[i].text), p.lines[on], m.Characteristic.Name, quotes(m.Lines)))
@@ -274,9 +276,22 @@ func (p *pass) count(on int, ns int64, serial []byte) {
 	for i := range p.now {
 		if c := &p.now[i]; c.text != nil {
 			s := &d.series[i*len(p.lines)+on]
-			s.row, s.value, s.of = append(s.row, row), append(s.value, c.value), append(s.of, c.of)
-			s.ofMatters = s.ofMatters || c.of != 1
+			s.add(row, c.value, c.of)
 		}
+	}
+}
+
+// add adds a measurement to a column.
+func (s *column) add(row int, value, of float64) {
+	s.row, s.value = append(s.row, row), append(s.value, value)
+	switch {
+	case len(s.of) > 0:
+		s.of = append(s.of, of)
+	case of != 1:
+		for range len(s.value) - 1 {
+			s.of = append(s.of, 1)
+		}
+		s.of = append(s.of, of)
 	}
 }
 
@@ -297,12 +312,23 @@ func (p *pass) hold(number int, sentence string) {
 	p.held = append(p.held, rules.HeldRow{Line: p.recs.line, Column: name, Text: text, Reason: shown(p.file) + ", " + reason})
 }
 
-// rows copies the rows that count off the desk.
+// handOver takes numbers off the desk: by a copy, or, where there are many, the desk's own.
+func handOver[T int | int64 | float64](from *[]T) []T {
+	const many = 1 << 15
+	if len(*from) < many {
+		return slices.Clone(*from)
+	}
+	list := slices.Clip(*from)
+	*from = nil
+	return list
+}
+
+// rows takes the rows that count off the desk.
 func (p *pass) rows() rules.Rows {
 	d := p.desk
-	rows := rules.Rows{Line: slices.Clone(d.line)}
+	rows := rules.Rows{Line: handOver(&d.line)}
 	if p.at.time >= 0 {
-		rows.Time = slices.Clone(d.time)
+		rows.Time = handOver(&d.time)
 	}
 	if p.at.serial >= 0 {
 		all, from := string(d.serials), 0
@@ -314,7 +340,7 @@ func (p *pass) rows() rules.Rows {
 	return rows
 }
 
-// allSeries copies the measurements off the desk: in the order of the source's characteristics,
+// allSeries takes the measurements off the desk: in the order of the source's characteristics,
 // and of their lines.
 func (p *pass) allSeries() []rules.Series {
 	var list []rules.Series
@@ -325,9 +351,9 @@ func (p *pass) allSeries() []rules.Series {
 			if len(s.row) == 0 {
 				continue
 			}
-			series := rules.Series{Process: rules.ProcessName(m.Characteristic.Name, line), Row: slices.Clone(s.row), Value: slices.Clone(s.value)}
-			if s.ofMatters {
-				series.Of = slices.Clone(s.of)
+			series := rules.Series{Process: rules.ProcessName(m.Characteristic.Name, line), Row: handOver(&s.row), Value: handOver(&s.value)}
+			if len(s.of) > 0 {
+				series.Of = handOver(&s.of)
 			}
 			list = append(list, series)
 		}
