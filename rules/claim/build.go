@@ -2,219 +2,243 @@ package claim
 
 import (
 	"fmt"
-	"math"
+	"math/big"
 	"slices"
 )
 
-// times multiplies by a constant.
-func (v value) times(by float64) (value, *Error) {
-	if by == 0 && v.kind != "" {
-		return v, &Error{Column: v.column, Read: "a quantity times 0", Expected: "a factor that is not 0"}
+// names are the processes a claim mentions, each with the column of its first mention.
+type names struct {
+	names  []string
+	places []int
+}
+
+// index is the number of a name, which is added where it is new.
+func (n *names) index(name string, column int) int {
+	i := slices.Index(n.names, name)
+	if i < 0 {
+		i = len(n.names)
+		n.names, n.places = append(n.names, name), append(n.places, column)
 	}
-	v.terms = slices.Clone(v.terms)
-	if v.form == Linear {
-		for i := range v.terms {
-			v.terms[i].Weight *= by
-		}
+	return i
+}
+
+// bounds are what a quantity is compared with; low and high for Within only.
+type bounds struct {
+	test             Test
+	bound, low, high *big.Rat
+}
+
+// minus moves a constant across; over divides by a factor, which turns the test where it is
+// below 0.
+func (b bounds) minus(c *big.Rat) bounds {
+	if b.test == Within {
+		b.low, b.high = new(big.Rat).Sub(b.low, c), new(big.Rat).Sub(b.high, c)
 	} else {
-		v.scale *= by
+		b.bound = new(big.Rat).Sub(b.bound, c)
 	}
-	v.constant *= by
-	if math.IsInf(v.constant, 0) || math.IsNaN(v.constant) {
-		return v, &Error{Column: v.column, Read: "a number that grows beyond all bounds", Expected: "numbers that float64 can hold"}
-	}
-	return v, nil
+	return b
 }
 
-// plus adds two parts.
-func (v value) plus(w value) (value, *Error) {
-	constant := v.constant + w.constant
+func (b bounds) over(by *big.Rat) bounds {
 	switch {
-	case w.kind == "":
-		v.constant = constant
-		return v, nil
-	case v.kind == "":
-		w.constant = constant
-		return w, nil
-	case v.kind != w.kind:
-		return v, &Error{Column: w.column, Read: string(w.kind), Expected: string(v.kind) + ": all quantities of a claim are of one kind"}
-	case v.form == Linear && w.form == Linear:
-		v.terms, v.constant = merge(v.terms, w.terms), constant
-		return v, nil
-	case v.form == Linear && w.form == Largest:
-		return contest(v, w, constant)
-	case v.form == Largest && w.form == Linear:
-		return contest(w, v, constant)
-	}
-	return v, &Error{Column: w.column, Read: "a second ratio, absolute value, max or min", Expected: "one alone"}
-}
-
-// contest makes one quantity minus the largest, or smallest, of others.
-func contest(one, others value, constant float64) (value, *Error) {
-	if len(one.terms) != 1 || one.terms[0].Weight != -others.scale || math.Abs(others.scale) != 1 {
-		return one, &Error{Column: others.column, Read: "max or min beside other weights",
-			Expected: "one quantity minus max(...) or min(...) of others"}
-	}
-	if len(others.terms)+1 > mostExtremes {
-		return one, &Error{Column: others.column, Read: fmt.Sprintf("%d quantities", len(others.terms)+1), Expected: fmt.Sprintf("at most %d", mostExtremes)}
-	}
-	form := Smallest
-	if others.isMax {
-		form = Largest
-	}
-	if slices.ContainsFunc(others.terms, func(t Term) bool { return t.Process == one.terms[0].Process }) {
-		return one, &Error{Column: others.column, Read: "the process itself among those it is compared with", Expected: "other processes"}
-	}
-	terms := append([]Term{{1, one.terms[0].Process}}, others.terms...)
-	return value{form: form, kind: one.kind, terms: terms, constant: constant, scale: one.terms[0].Weight, column: one.column}, nil
-}
-
-// merge adds up weighted terms, those of one process together.
-func merge(a, b []Term) []Term {
-	sum := slices.Clone(a)
-	for _, t := range b {
-		if i := slices.IndexFunc(sum, func(s Term) bool { return s.Process == t.Process }); i >= 0 {
-			sum[i].Weight += t.Weight
-		} else {
-			sum = append(sum, t)
-		}
-	}
-	return sum
-}
-
-// over divides by a constant, or makes a ratio.
-func (v value) over(w value, column int) (value, *Error) {
-	if w.kind == "" {
-		if w.constant == 0 {
-			return v, &Error{Column: column, Read: "a division by 0", Expected: "a divisor that is not 0"}
-		}
-		if v.form == Linear {
-			v.terms = slices.Clone(v.terms)
-			for i := range v.terms {
-				v.terms[i].Weight /= w.constant
-			}
-		} else {
-			v.scale /= w.constant
-		}
-		v.constant /= w.constant
-		return v, nil
-	}
-	single := func(x value) bool {
-		return x.form == Linear && len(x.terms) == 1 && x.constant == 0
-	}
-	if !single(v) || !single(w) || v.kind != w.kind {
-		return v, &Error{Column: column, Read: "this quotient", Expected: "one quantity over another of the same kind"}
-	}
-	if !slices.Contains([]Kind{SD, Median, Proportion, Rate}, v.kind) {
-		return v, &Error{Column: column, Read: fmt.Sprintf("a ratio of two quantities %s", v.kind), Expected: "a ratio of sd, median, proportion or rate, or a difference"}
-	}
-	if v.terms[0].Process == w.terms[0].Process {
-		return v, &Error{Column: column, Read: "a process over itself", Expected: "two processes"}
-	}
-	return value{
-		form: Ratio, kind: v.kind, column: v.column, scale: v.terms[0].Weight / w.terms[0].Weight,
-		terms: []Term{{1, v.terms[0].Process}, {1, w.terms[0].Process}},
-	}, nil
-}
-
-// build makes the claim that the quantity, with everything on the left, passes the test
-// against 0, or lies within low and high.
-func (p *parser) build(v value, test Test, low, high float64) (*Claim, *Error) {
-	if v.kind == "" {
-		return nil, &Error{Column: 1, Read: "a claim without a quantity", Expected: "a quantity such as mean(head.L1)"}
-	}
-	c := &Claim{Kind: v.kind, Form: v.form, Test: test, Terms: v.terms}
-	bound := -v.constant
-	low, high = low-v.constant, high-v.constant
-	scale := 1.0
-	switch v.form {
-	case Linear:
-		c.Terms = slices.DeleteFunc(slices.Clone(v.terms), func(t Term) bool { return t.Weight == 0 })
-		if len(c.Terms) == 0 {
-			return nil, &Error{Column: v.column, Read: "quantities that cancel out", Expected: "a quantity that is left"}
-		}
-		// One quantity alone, or a plain difference, is written with weight 1 in front.
-		if w := c.Terms[0].Weight; len(c.Terms) == 1 || w < 0 && len(c.Terms) == 2 && c.Terms[1].Weight == -w {
-			scale = w
-			for i := range c.Terms {
-				c.Terms[i].Weight /= w
-			}
+	case b.test == Within:
+		b.low, b.high = new(big.Rat).Quo(b.low, by), new(big.Rat).Quo(b.high, by)
+		if by.Sign() < 0 {
+			b.low, b.high = b.high, b.low
 		}
 	default:
-		scale = v.scale
+		b.bound = new(big.Rat).Quo(b.bound, by)
+		if by.Sign() < 0 {
+			b.test = b.test.turned()
+		}
 	}
-	if scale < 0 {
-		c.Test = [...]Test{Below, Above, Within}[test]
+	return b
+}
+
+// turned is the test that stands for a claim whose sides have been swapped.
+func (t Test) turned() Test { return [...]Test{Above: Below, Below: Above, Within: Within}[t] }
+
+// build makes the canonical claim of a value and what it is compared with.
+func (n *names) build(v value, b bounds) (*Claim, *Error) {
+	switch {
+	case v.isConstant():
+		return nil, &Error{Column: 1, Read: "a claim without a quantity",
+			Expected: "a quantity such as mean(head.L1)"}
+	case v.shape == extreme:
+		return nil, &Error{Column: v.column, Read: "max or min alone",
+			Expected: "one quantity minus max(...) or min(...) of others"}
 	}
-	bound, low, high = bound/scale, low/scale, high/scale
-	if low > high {
-		low, high = high, low
+	v.terms = slices.DeleteFunc(slices.Clone(v.terms), func(t weighted) bool { return t.weight.Sign() == 0 })
+	if len(v.terms) == 0 {
+		return nil, &Error{Column: v.column, Read: "quantities that cancel out", Expected: "a quantity that is left"}
 	}
-	if test == Within {
-		c.Low, c.High = low+0, high+0
+	v, b = v.simple(b)
+	b = b.minus(v.constant).over(v.scale)
+	c := &Claim{Kind: v.kind, Form: v.form()}
+	b, err := n.weigh(c, v, b)
+	if err != nil {
+		return nil, err
+	}
+	if err := c.compare(b, v.column); err != nil {
+		return nil, err
+	}
+	if c.IsSpread() {
+		return c, nil // Spread finds out how many terms there are
+	}
+	return c, c.route()
+}
+
+// simple writes two forms as simpler ones that say the same: |q + k| < d is q within
+// -k-d .. -k+d; and for quantities that can't be below 0, q - r*p > 0 is q/p > r.
+func (v value) simple(b bounds) (value, bounds) {
+	if v.shape == absolute && v.inner.Sign() != 0 && b.test != Within {
+		rest := b.minus(v.constant).over(v.scale)
+		if rest.test == Below && rest.bound.Sign() > 0 {
+			v.shape, v.scale, v.constant = sum, one, v.inner
+			return v, bounds{test: Within, low: new(big.Rat).Neg(rest.bound), high: rest.bound}
+		}
+	}
+	if v.shape == sum && len(v.terms) == 2 && (v.kind == SD || v.kind == Median) && b.test != Within &&
+		b.bound.Cmp(v.constant) == 0 && v.terms[0].weight.Sign()*v.terms[1].weight.Sign() < 0 {
+		first, second := v.terms[0], v.terms[1]
+		if first.weight.Sign() < 0 {
+			b.test = b.test.turned()
+		}
+		b.bound = new(big.Rat).Neg(new(big.Rat).Quo(second.weight, first.weight))
+		v.shape, v.constant = ratio, new(big.Rat)
+		v.terms = []weighted{{one, first.process}, {one, second.process}}
+	}
+	return v, b
+}
+
+func (v value) form() Form {
+	switch {
+	case v.shape == absolute:
+		return Absolute
+	case v.shape == ratio:
+		return Ratio
+	case v.shape == contest && v.isMax:
+		return Largest
+	case v.shape == contest:
+		return Smallest
+	}
+	return Linear
+}
+
+// weigh gives the claim its terms. One quantity has weight 1, and so has the first of a plain
+// difference; within bars the first weight is above 0. What that divides by goes to the bounds.
+func (n *names) weigh(c *Claim, v value, b bounds) (bounds, *Error) {
+	if v.shape == absolute && v.inner.Sign() != 0 {
+		return b, &Error{Column: v.column, Read: "a number beside the quantities between the bars",
+			Expected: "quantities alone, or < and a bound above 0: the rest is written as `within lo .. hi` without bars"}
+	}
+	weights := make([]float64, len(v.terms))
+	for i, t := range v.terms {
+		var ok bool
+		if weights[i], ok = round(t.weight); !ok {
+			return b, &Error{Column: n.places[t.process], Read: "a weight too large or too small",
+				Expected: "a weight that float64 can hold"}
+		}
+	}
+	by := one
+	switch first := v.terms[0].weight; {
+	case len(weights) == 1, len(weights) == 2 && weights[0] < 0 && weights[1] == -weights[0]:
+		by = first
+	case v.shape == absolute && first.Sign() < 0:
+		by = big.NewRat(-1, 1)
+	}
+	f, _ := by.Float64()
+	for i, t := range v.terms {
+		c.Terms = append(c.Terms, Term{weights[i] / f, c.mention(n.names[t.process], n.places[t.process])})
+	}
+	if v.shape == absolute {
+		by = new(big.Rat).Abs(by)
+	}
+	return b.over(by), nil
+}
+
+// mention is the index of a process, which is added where it is new.
+func (c *Claim) mention(name string, column int) int {
+	i := slices.Index(c.Processes, name)
+	if i < 0 {
+		i = len(c.Processes)
+		c.Processes, c.places = append(c.Processes, name), append(c.places, column)
+	}
+	return i
+}
+
+// compare gives the claim its test and bounds, rounded to float64.
+func (c *Claim) compare(b bounds, column int) *Error {
+	c.Test = b.test
+	ok, okHigh := true, true
+	if b.test == Within {
+		c.Low, ok = round(b.low)
+		c.High, okHigh = round(b.high)
+		if ok && okHigh && c.Low >= c.High {
+			return &Error{Column: column, Read: fmt.Sprintf("bounds that both come to %s", number(c.Low)),
+				Expected: "bounds that float64 can tell apart"}
+		}
 	} else {
-		c.Bound = bound + 0 // turns -0 into 0
+		c.Bound, ok = round(b.bound)
 	}
-	if !finite(c.Bound) || !finite(c.Low) || !finite(c.High) {
-		return nil, &Error{Column: v.column, Read: "a bound that grows beyond all bounds", Expected: "numbers that float64 can hold"}
+	if !ok || !okHigh {
+		return &Error{Column: column, Read: "a bound that comes to something too large or too small",
+			Expected: "numbers that float64 can hold"}
 	}
-	p.renumber(c)
-	return c, c.route(v.column)
+	return nil
 }
 
-func finite(x float64) bool { return !math.IsNaN(x) && !math.IsInf(x, 0) }
+// Most processes in a sum of means, a sum of proportions or rates, and a contest. For a sum of
+// more than two means, and for a contest of means, package evidence has no exact route.
+const (
+	mostMeans    = 2
+	mostCounts   = 2
+	mostExtremes = 64
+)
 
-// renumber lists only the processes that are left, in the order of the terms.
-func (p *parser) renumber(c *Claim) {
-	terms := slices.Clone(c.Terms)
-	for i, t := range terms {
-		name := p.names[t.Process]
-		j := slices.Index(c.Processes, name)
-		if j < 0 {
-			j = len(c.Processes)
-			c.Processes = append(c.Processes, name)
-			c.places = append(c.places, p.places[t.Process])
-		}
-		terms[i].Process = j
-	}
-	c.Terms = terms
-}
-
-// route refuses what the engine has no exact way to weigh.
-func (c *Claim) route(column int) *Error {
-	refuse := func(read, expected string) *Error {
-		return &Error{Column: column, Read: read, Expected: expected}
-	}
+// route refuses what package evidence has no exact way to weigh.
+func (c *Claim) route() *Error {
 	n := len(c.Terms)
-	if c.Form == Ratio {
+	refuse := func(term int, read, expected string) *Error {
+		return &Error{Column: c.place(c.Terms[term].Process), Read: read, Expected: expected}
+	}
+	switch {
+	case c.Form == Ratio || c.Form == Absolute:
 		if c.Test != Within && c.Bound <= 0 || c.Test == Within && c.Low < 0 {
-			return refuse("a ratio against a bound that is not above 0", "a bound above 0")
+			what := map[Form]string{Ratio: "a ratio", Absolute: "an absolute value"}[c.Form]
+			return refuse(0, what+" against a bound that is not above 0", "a bound above 0")
 		}
+	case c.Form != Linear && c.Kind != Proportion && c.Kind != Rate:
+		return refuse(1, "max or min of several quantities "+string(c.Kind),
+			"max or min of proportion or rate, or the difference of two")
+	case c.Form != Linear && n > mostExtremes:
+		return refuse(mostExtremes, fmt.Sprintf("%d processes", n), fmt.Sprintf("at most %d", mostExtremes))
+	}
+	if c.Form != Linear && c.Form != Absolute {
 		return nil
 	}
 	switch c.Kind {
 	case Mean, Bias:
-		if c.Form == Largest || c.Form == Smallest {
-			return refuse("max or min of means", "differences of two means: no exact route for more has been built yet")
-		}
-		if n > mostTerms {
-			return refuse(fmt.Sprintf("a contrast of %d means", n), fmt.Sprintf("at most %d", mostTerms))
+		if n > mostMeans {
+			return refuse(mostMeans, fmt.Sprintf("a sum of %d quantities %s", n, c.Kind),
+				fmt.Sprintf("at most %d", mostMeans))
 		}
 	case Proportion, Rate:
-		if (c.Form == Linear || c.Form == Absolute) && n > 2 {
-			return refuse(fmt.Sprintf("%d quantities %s", n, c.Kind), "one, or two with weights")
+		if n > mostCounts {
+			return refuse(mostCounts, fmt.Sprintf("a sum of %d quantities %s", n, c.Kind),
+				fmt.Sprintf("at most %d, or one minus max(...) or min(...) of others", mostCounts))
+		}
+	case SD, Median:
+		if n > 1 {
+			return refuse(1, "a sum of two quantities "+string(c.Kind), "one alone, or the ratio of two")
 		}
 	default:
-		if c.Form != Linear || n != 1 {
-			what := "one alone"
-			if c.Kind == SD || c.Kind == Median {
-				what = "one alone, or the ratio of two"
-			}
-			return refuse(fmt.Sprintf("more than one %s", c.Kind), what)
+		if n > 1 {
+			return refuse(1, "a second quantity "+string(c.Kind), "one alone")
 		}
 	}
-	if c.Form == Absolute && (c.Test != Within && c.Bound <= 0 || c.Test == Within && c.Low < 0) {
-		return refuse("an absolute value against a bound that is not above 0", "a bound above 0")
+	if c.Form == Absolute && c.Kind != Mean && c.Kind != Bias && c.Kind != Proportion && c.Kind != Rate {
+		return refuse(0, "the absolute value of "+string(c.Kind), "the quantity without bars")
 	}
 	return nil
 }

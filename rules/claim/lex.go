@@ -47,7 +47,7 @@ func (t token) read() string {
 	return fmt.Sprintf("%q", t.text)
 }
 
-// longest is the most characters a claim may have.
+// longest is the most bytes a claim may have.
 const longest = 4096
 
 // lex cuts the text into tokens, the last of which is tokenEnd.
@@ -173,6 +173,8 @@ func (l *lexer) quoted() (token, *Error) {
 		case r == '\\' && (l.peek(1) == '"' || l.peek(1) == '\\'):
 			l.at++
 			name.WriteRune(l.runes[l.at])
+		case unicode.IsControl(r):
+			return t, &Error{Column: l.at + 1, Read: fmt.Sprintf("%q", r), Expected: `a name without control characters, or a closing "`}
 		default:
 			name.WriteRune(r)
 		}

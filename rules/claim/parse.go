@@ -3,19 +3,14 @@ package claim
 import (
 	"fmt"
 	"math"
+	"math/big"
 	"slices"
 	"strconv"
+	"strings"
 )
 
 // deepest is how far parentheses may nest.
 const deepest = 64
-
-// Most processes that a contrast of means, and a largest or smallest of proportions or rates,
-// may have.
-const (
-	mostTerms    = 2 // no exact route for more has been built yet
-	mostExtremes = 64
-)
 
 // kinds are the quantities in the order in which errors list them.
 var kinds = []Kind{Mean, SD, Next, Outside, Capability, Median, Proportion, Rate, Bias}
@@ -29,9 +24,11 @@ var kinds = []Kind{Mean, SD, Next, Outside, Capability, Median, Proportion, Rate
 //	         | "|" sum "|" | "(" sum ")" | ( "+" | "-" ) factor .
 //
 // What it says must come to one of the Forms: quantities of one kind, summed with constant
-// weights; one ratio of two; one absolute value; one quantity against the largest or smallest
-// of others. Terms on the right move to the left, constants on the left to the right. The
-// error is an *Error.
+// weights; one ratio of two; one absolute value; one quantity minus the largest or smallest of
+// others. Terms on the right move to the left, constants on the left to the right. Numbers are
+// taken as they are written, in decimal, and rounded to float64 at the end. Two forms are
+// read as others that say the same: |q - k| < d as q within k-d .. k+d, and sd(a) > r*sd(b) as a
+// ratio (median likewise). The error is an *Error.
 func Parse(text string) (*Claim, error) {
 	tokens, err := lex(text)
 	if err != nil {
@@ -40,7 +37,7 @@ func Parse(text string) (*Claim, error) {
 	p := &parser{tokens: tokens}
 	c, err := p.claim()
 	if err != nil {
-		return nil, err
+		return nil, err // not c, err: a nil *Error is not a nil error
 	}
 	return c, nil
 }
@@ -49,19 +46,7 @@ type parser struct {
 	tokens []token
 	at     int
 	depth  int
-	names  []string
-	places []int // column of the first mention of each name
-}
-
-// value is what a part of a claim comes to.
-type value struct {
-	form     Form
-	kind     Kind // empty for a constant
-	terms    []Term
-	constant float64
-	isMax    bool    // of the form Largest, before it is known what stands against it: max, not min
-	scale    float64 // of an absolute value or a ratio: its sign and factor
-	column   int
+	names  names
 }
 
 func (p *parser) peek() token { return p.tokens[p.at] }
@@ -114,32 +99,20 @@ func (p *parser) compare(left value, test Test) (*Claim, *Error) {
 	if err != nil {
 		return nil, err
 	}
-	right, err = right.times(-1)
+	if left.isConstant() { // 0.4 < q reads as q > 0.4
+		left, right, test = right, left, test.turned()
+	}
+	all, err := left.plus(right.negated())
 	if err != nil {
 		return nil, err
 	}
-	all, err := left.plus(right)
-	if err != nil {
-		return nil, err
-	}
-	return p.build(all, test, 0, 0)
+	return p.names.build(all, bounds{test: test, bound: new(big.Rat)})
 }
 
 func (p *parser) within(left value) (*Claim, *Error) {
 	if t := p.peek(); t.kind == tokenWord && t.text == "limits" {
 		p.at++
-		if err := p.end(); err != nil {
-			return nil, err
-		}
-		c, err := p.build(left, Within, 0, 0)
-		if err != nil {
-			return nil, err
-		}
-		if c.Form != Linear || len(c.Terms) != 1 || c.Terms[0].Weight != 1 || left.constant != 0 || (c.Kind != Next && c.Kind != Mean && c.Kind != Median) {
-			return nil, &Error{Column: t.column, Read: `"limits"`, Expected: "two numbers: limits belong to one mean, median or next unit"}
-		}
-		c.Limits, c.Low, c.High = true, math.Inf(-1), math.Inf(1)
-		return c, nil
+		return p.withinLimits(left, t)
 	}
 	low, err := p.constant()
 	if err == nil {
@@ -156,23 +129,39 @@ func (p *parser) within(left value) (*Claim, *Error) {
 	if err != nil {
 		return nil, err
 	}
-	if !(low < high) {
-		return nil, &Error{Column: column, Read: number(high), Expected: "a bound above " + number(low)}
+	if low.Cmp(high) >= 0 {
+		l, _ := low.Float64()
+		h, _ := high.Float64()
+		return nil, &Error{Column: column, Read: number(h), Expected: "a bound above " + number(l)}
 	}
-	return p.build(left, Within, low, high)
+	return p.names.build(left, bounds{test: Within, low: low, high: high})
+}
+
+func (p *parser) withinLimits(left value, t token) (*Claim, *Error) {
+	if err := p.end(); err != nil {
+		return nil, err
+	}
+	// The bounds stand in until Bind knows the limits.
+	c, err := p.names.build(left, bounds{test: Within, low: new(big.Rat), high: one})
+	if err != nil {
+		return nil, err
+	}
+	if !left.isSingle() || left.terms[0].weight.Cmp(one) != 0 || !slices.Contains([]Kind{Next, Mean, Median}, c.Kind) {
+		return nil, &Error{Column: t.column, Read: `"limits"`,
+			Expected: "two numbers: limits belong to one mean, median or next unit"}
+	}
+	c.Limits, c.Low, c.High = true, math.Inf(-1), math.Inf(1)
+	return c, nil
 }
 
 // constant reads a sum that must come to a number.
-func (p *parser) constant() (float64, *Error) {
+func (p *parser) constant() (*big.Rat, *Error) {
 	t := p.peek()
 	v, err := p.sum()
-	if err != nil {
-		return 0, err
+	if err == nil && !v.isConstant() {
+		err = &Error{Column: t.column, Read: t.read(), Expected: "a number"}
 	}
-	if v.kind != "" {
-		return 0, &Error{Column: t.column, Read: t.read(), Expected: "a number"}
-	}
-	return v.constant, nil
+	return v.constant, err
 }
 
 func (p *parser) sum() (value, *Error) {
@@ -187,9 +176,7 @@ func (p *parser) sum() (value, *Error) {
 		case p.sign("-"):
 			var w value
 			if w, err = p.product(); err == nil {
-				if w, err = w.times(-1); err == nil {
-					v, err = v.plus(w)
-				}
+				v, err = v.plus(w.negated())
 			}
 		default:
 			return v, nil
@@ -209,9 +196,9 @@ func (p *parser) product() (value, *Error) {
 				return v, err
 			}
 			switch {
-			case w.kind == "":
+			case w.isConstant():
 				v, err = v.times(w.constant)
-			case v.kind == "":
+			case v.isConstant():
 				v, err = w.times(v.constant)
 			default:
 				err = &Error{Column: t.column, Read: "a product of two quantities", Expected: "a product of a quantity and a number"}
@@ -238,17 +225,15 @@ func (p *parser) factor() (value, *Error) {
 	switch {
 	case t.kind == tokenNumber:
 		p.at++
-		x, err := strconv.ParseFloat(t.text, 64)
-		if err != nil || math.IsInf(x, 0) {
-			return value{}, &Error{Column: t.column, Read: t.read(), Expected: "a number that float64 can hold"}
-		}
-		return value{constant: x, column: t.column}, nil
+		x, err := exact(t)
+		return constantValue(x, t.column), err
 	case p.sign("-"):
 		v, err := p.factor()
 		if err != nil {
 			return v, err
 		}
-		return v.times(-1)
+		v.column = t.column
+		return v.negated(), nil
 	case p.sign("+"):
 		return p.factor()
 	case p.sign("("):
@@ -273,13 +258,16 @@ func (p *parser) absolute(t token) (value, *Error) {
 	if err != nil {
 		return v, err
 	}
-	if v.form != Linear || v.kind == "" {
-		return v, &Error{Column: t.column, Read: "the absolute value", Expected: "a difference of quantities between the bars"}
+	if v.isConstant() {
+		v.constant = new(big.Rat).Abs(v.constant)
+		return v, nil
 	}
-	if v.constant != 0 {
-		return v, &Error{Column: t.column, Read: "a number beside the quantities between the bars", Expected: "quantities alone; write the bounds as `within lo .. hi` without bars"}
+	if v.shape != sum {
+		return v, &Error{Column: t.column, Read: "the absolute value of a ratio, an absolute value, max or min",
+			Expected: "a sum or difference between the bars"}
 	}
-	v.form, v.scale, v.column = Absolute, 1, t.column
+	v.shape, v.column = absolute, t.column
+	v.inner, v.constant = v.constant, new(big.Rat)
 	return v, nil
 }
 
@@ -308,12 +296,7 @@ func (p *parser) quantity(t token) (value, *Error) {
 	if err := p.expect(")", `")" after the name`); err != nil {
 		return value{}, err
 	}
-	i := slices.Index(p.names, name.text)
-	if i < 0 {
-		i = len(p.names)
-		p.names, p.places = append(p.names, name.text), append(p.places, name.column)
-	}
-	return value{kind: Kind(t.text), terms: []Term{{1, i}}, column: t.column}, nil
+	return quantityValue(Kind(t.text), p.names.index(name.text, name.column), t.column), nil
 }
 
 func joinKinds() string {
@@ -329,25 +312,53 @@ func joinKinds() string {
 
 // extremes reads the arguments of max or min.
 func (p *parser) extremes(t token) (value, *Error) {
-	v := value{form: Largest, isMax: t.text == "max", scale: 1, column: t.column}
+	all := constantValue(new(big.Rat), t.column)
 	for {
 		at := p.peek()
 		w, err := p.sum()
 		if err != nil {
-			return v, err
+			return w, err
 		}
-		if w.form != Linear || len(w.terms) != 1 || w.terms[0].Weight != 1 || w.constant != 0 {
-			return v, &Error{Column: at.column, Read: at.read(), Expected: "single quantities between the commas"}
+		if !w.isSingle() || w.terms[0].weight.Cmp(one) != 0 {
+			return w, &Error{Column: at.column, Read: at.read(), Expected: "single quantities between the commas"}
 		}
-		if v.kind != "" && w.kind != v.kind {
-			return v, &Error{Column: at.column, Read: string(w.kind), Expected: string(v.kind) + ", as the first one is"}
+		if !all.isConstant() && w.kind != all.kind {
+			return w, &Error{Column: at.column, Read: string(w.kind), Expected: string(all.kind) + ", as the first one is"}
 		}
-		v.kind, v.terms = w.kind, append(v.terms, w.terms...)
+		all.kind, all.terms = w.kind, append(all.terms, w.terms...)
 		if p.sign(",") {
 			continue
 		}
-		return v, p.expect(")", `"," or ")"`)
+		all.terms = unique(all.terms)
+		if p.names.names[all.terms[0].process] == Others {
+			all.shape = extreme // of one name that stands for several
+			all.isMax = t.text == "max"
+		}
+		return all.extreme(t.text == "max"), p.expect(")", `"," or ")"`)
 	}
+}
+
+// exact is the number a token stands for, which must be one that float64 can hold.
+func exact(t token) (*big.Rat, *Error) {
+	f, err := strconv.ParseFloat(t.text, 64)
+	x := new(big.Rat)
+	switch zero := strings.Trim(t.text[:mantissa(t.text)], "0.") == ""; {
+	case err == nil && zero:
+		return x, nil
+	case err == nil && f != 0:
+		if _, ok := x.SetString(t.text); ok {
+			return x, nil
+		}
+	}
+	return x, &Error{Column: t.column, Read: t.read(), Expected: "a number that float64 can hold"}
+}
+
+// mantissa is where the exponent of a number begins, or its end.
+func mantissa(text string) int {
+	if i := strings.IndexAny(text, "eE"); i >= 0 {
+		return i
+	}
+	return len(text)
 }
 
 func number(x float64) string { return strconv.FormatFloat(x, 'g', -1, 64) }

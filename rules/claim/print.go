@@ -5,9 +5,13 @@ import (
 	"strings"
 )
 
-// String is the canonical form: terms on the left in the order of first mention, weights
-// written as products where they are not 1, a bare number on the right, one blank around
-// operators, names quoted only where they must be. Parse of it is the same claim.
+// String is the canonical form, of which Parse makes the same claim again:
+//
+//   - processes in the order of first mention, each once in a sum;
+//   - one quantity alone, or the first of a plain difference, with weight 1; other weights as
+//     they were, written as products; within bars, the first weight above 0;
+//   - on the right a bare number, or two with ".." between, as the shortest decimal that is the
+//     float64; one blank around operators; names quoted only where they must be.
 func (c *Claim) String() string {
 	var b strings.Builder
 	switch c.Form {
