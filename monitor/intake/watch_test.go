@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"sync"
 	"sync/atomic"
@@ -455,4 +456,43 @@ func BenchmarkStart(b *testing.B) {
 		w.scan(b.Context())
 		w.unwatch()
 	}
+}
+
+// BenchmarkArrival is the time from a file's renaming to its reading in the writer's hands,
+// while 20 sources are watched and each gets files. Settle is 0: it comes on top.
+func BenchmarkArrival(b *testing.B) {
+	out := make(chan Arrival)
+	var folders []string
+	var done sync.WaitGroup
+	for i := range 20 {
+		folder := b.TempDir()
+		src := someSource(func(s *config.Source) { s.Name, s.Folder, s.Settle = fmt.Sprint("rig", i), folder, 0 })
+		done.Go(func() {
+			Watch(b.Context(), src, somePlan(), func(string, int64, time.Time) bool { return false }, out)
+		})
+		folders = append(folders, folder)
+	}
+	b.Cleanup(done.Wait) // runs when the context has ended
+	content := []byte(someHeader + strings.Repeat(row1, 12))
+	var all []time.Duration
+	n := 0
+	for b.Loop() {
+		b.StopTimer()
+		folder, name := folders[n%20], fmt.Sprintf("%d.csv", n)
+		n++
+		if err := os.WriteFile(filepath.Join(folder, "."+name), content, 0o644); err != nil {
+			b.Fatal(err)
+		}
+		b.StartTimer()
+		begun := time.Now()
+		if err := os.Rename(filepath.Join(folder, "."+name), filepath.Join(folder, name)); err != nil {
+			b.Fatal(err)
+		}
+		if a := <-out; a.File != name {
+			b.Fatal(a.File)
+		}
+		all = append(all, time.Since(begun))
+	}
+	slices.Sort(all)
+	b.ReportMetric(float64(all[len(all)*99/100].Microseconds()), "µs-p99")
 }
