@@ -178,7 +178,7 @@ func (w *watcher) note(ctx context.Context, info fs.FileInfo) {
 		w.sent[name] = s
 		return
 	}
-	if c := w.waiting[name]; c == nil || !c.same(now) {
+	if c := w.waiting[name]; c == nil || !c.same(now) && w.growing == nil {
 		w.await(name, now)
 	}
 }
@@ -231,33 +231,44 @@ var errOther = errors.New("it is no plain file")
 // errFolder says that the folder is at fault, not the file.
 var errFolder = errors.New("the folder can't be opened")
 
-// content reads a file through one handle, if it still is as it was expected to be. Seen is
-// what it is like instead. A reason says why it is to be held unread.
-func (w *watcher) content(name string, expected stamp) (content []byte, seen stamp, reason string, err error) {
+// open opens a file of the folder, if it is a plain one, and sees what it is like.
+func (w *watcher) open(name string) (file *os.File, seen stamp, err error) {
 	root, err := os.OpenRoot(w.src.Folder)
 	if err != nil {
-		return nil, seen, "", errors.Join(errFolder, err)
+		return nil, seen, errors.Join(errFolder, err)
 	}
 	defer root.Close()
 	before, err := root.Lstat(name)
 	if err != nil {
-		return nil, seen, "", err
+		return nil, seen, err
 	}
 	if !before.Mode().IsRegular() {
-		return nil, seen, "", errOther
+		return nil, seen, errOther
 	}
 	// Without O_NONBLOCK, a pipe that has just taken the file's place would be waited for.
-	file, err := root.OpenFile(name, os.O_RDONLY|syscall.O_NONBLOCK, 0)
+	if file, err = root.OpenFile(name, os.O_RDONLY|syscall.O_NONBLOCK, 0); err != nil {
+		return nil, seen, err
+	}
+	opened, err := file.Stat()
+	if err == nil && (!opened.Mode().IsRegular() || !os.SameFile(before, opened)) {
+		err = errMoving
+	}
+	if err != nil {
+		_ = file.Close() // nothing was written
+		return nil, seen, err
+	}
+	return file, stamp{opened.Size(), opened.ModTime()}, nil
+}
+
+// content reads a file through one handle, if it still is as it was expected to be. Seen is
+// what it is like instead. A reason says why it is to be held unread.
+func (w *watcher) content(name string, expected stamp) (content []byte, seen stamp, reason string, err error) {
+	file, seen, err := w.open(name)
 	if err != nil {
 		return nil, seen, "", err
 	}
 	defer file.Close()
-	opened, err := file.Stat()
-	if err != nil {
-		return nil, seen, "", err
-	}
-	seen = stamp{opened.Size(), opened.ModTime()}
-	if !opened.Mode().IsRegular() || !os.SameFile(before, opened) || !seen.same(expected) {
+	if !seen.same(expected) {
 		return nil, seen, "", errMoving
 	}
 	if seen.size > w.src.Largest {

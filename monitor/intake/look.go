@@ -120,9 +120,31 @@ const (
 
 // take reads one file and sends what it comes to.
 func (w *watcher) take(ctx context.Context, c *candidate) {
+	if w.growing != nil {
+		w.follow(ctx, c)
+		return
+	}
 	w.ask()
 	content, seen, reason, err := w.content(c.name, c.stamp)
 	w.answered()
+	if err != nil {
+		w.failed(ctx, c, seen, err)
+		return
+	}
+	a := Arrival{File: c.name, Size: seen.size, Written: seen.written, Content: content}
+	if reason != "" {
+		a.Reading = w.unread(c.name, seen.size, reason)
+	} else {
+		a.Reading = w.reader.Read(c.name, seen.written, content)
+	}
+	if w.send(ctx, a) {
+		w.drop(c.name)
+		w.sent[c.name] = sentFile{stamp: seen, scan: w.scans}
+	}
+}
+
+// failed decides what becomes of a file that could not be read as it was expected to be.
+func (w *watcher) failed(ctx context.Context, c *candidate, seen stamp, err error) {
 	switch {
 	case errors.Is(err, errFolder):
 		w.delay(c, longestRetry)
@@ -135,19 +157,8 @@ func (w *watcher) take(ctx context.Context, c *candidate) {
 	case errors.Is(err, errOther):
 		w.drop(c.name)
 		w.hinted(ctx, c.name)
-	case err != nil:
-		w.tryAgain(ctx, c, err)
 	default:
-		a := Arrival{File: c.name, Size: seen.size, Written: seen.written, Content: content}
-		if reason != "" {
-			a.Reading = w.unread(c.name, seen.size, reason)
-		} else {
-			a.Reading = w.reader.Read(c.name, seen.written, content)
-		}
-		if w.send(ctx, a) {
-			w.drop(c.name)
-			w.sent[c.name] = sentFile{stamp: seen, scan: w.scans}
-		}
+		w.tryAgain(ctx, c, err)
 	}
 }
 

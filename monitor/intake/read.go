@@ -17,7 +17,8 @@
 // Where things are: read.go the Reader; text.go, records.go, numeral.go, clock.go and stamp.go
 // how encodings, records, numbers and times are read; header.go and rows.go what they mean;
 // account.go the account row by row; say.go how sentences show what was read; watch.go,
-// folder.go, look.go the watching; keep.go the copies of what is held.
+// folder.go, look.go the watching; grow.go and follow.go files that grow; keep.go the copies of
+// what is held.
 package intake
 
 import (
@@ -45,6 +46,10 @@ type Reading struct {
 	Ignored []string // columns of the file that nothing is mapped to
 	Remarks []string // sentences on what had to be decided: times that the clock showed twice
 	Cut     bool     // the text of a held row was too long to be kept beside its reason
+
+	headed bool  // the header was understood
+	broken bool  // what is behind the last row can't be read
+	last   int64 // the time of the last row, ns; 0 where there is none
 }
 
 // Reader reads the files of one source. It may be used by several goroutines.
@@ -106,15 +111,23 @@ func NewReader(src *config.Source, plan *rules.Plan) *Reader {
 
 // Read reads the content of a file, which was last written at a moment.
 func (r *Reader) Read(file string, written time.Time, content []byte) *Reading {
-	g := &Reading{SHA256: sha256.Sum256(content)}
+	return r.read(&Reading{SHA256: sha256.Sum256(content)}, file, written, content, 0, 0)
+}
+
+// read reads a content into a reading that has its digest. Where lines is set, what is behind
+// the header in it stands behind so many lines of the file, and the row before it had the time
+// last.
+func (r *Reader) read(g *Reading, file string, written time.Time, content []byte, lines int, last int64) *Reading {
 	p := pass{Reader: r, Reading: g, file: file, desk: r.desks.Get().(*desk)}
 	defer p.leave()
 	p.begin()
+	p.before, p.clock.last, p.clock.lasted = lines, last, last != 0
 	sum := hex.EncodeToString(g.SHA256[:])
 	sentence := r.unfit
 	if sentence == "" {
 		sentence = p.read(content)
 	}
+	g.last = p.clock.last
 	if sentence == "" && len(p.line) == 0 {
 		sentence = p.nothing()
 	}
@@ -146,6 +159,7 @@ type pass struct {
 	names    []string
 	held     []rules.HeldRow
 	heldText int
+	before   int    // lines of the file that were read before, with the header
 	first    string // why the first row is held, without the file's name
 }
 
@@ -181,20 +195,27 @@ func (p *pass) read(content []byte) (sentence string) {
 	if sentence := p.header(); sentence != "" {
 		return sentence
 	}
+	p.headed = true
 	return p.records()
 }
 
 // records reads the rows behind the header.
 func (p *pass) records() (sentence string) {
-	for units := p.src.Form.UnitsRow; ; units = false {
+	if p.src.Form.UnitsRow {
+		if _, bad := p.recs.read(); bad != nil && bad.whole {
+			return p.misread(bad)
+		}
+	}
+	if p.before > 0 {
+		p.recs.next = p.before + 1
+	}
+	for {
 		ok, bad := p.recs.read()
 		switch {
 		case !ok:
 			return ""
 		case bad != nil && bad.whole:
-			return p.broken(bad)
-		case units:
-			continue
+			return p.misread(bad)
 		case bad != nil:
 			p.hold(bad.field, bad.sentence)
 		default:
@@ -218,8 +239,9 @@ func (p *pass) zero(text []byte, at int) string {
 	return fmt.Sprintf("the file has zero bytes from here (%d in all), %s", bytes.Count(text, []byte{0}), kind)
 }
 
-// broken is the sentence for a file that can't be read on.
-func (p *pass) broken(bad *flaw) string {
+// misread is the sentence for a file that can't be read on.
+func (p *pass) misread(bad *flaw) string {
+	p.broken = true
 	p.where = fmt.Sprintf(", line %d", p.recs.line)
 	return p.column(bad.field) + bad.sentence + "; rows behind it could be misread, so the file is held whole"
 }
@@ -230,6 +252,7 @@ func (p *pass) tooMuch() string {
 		return ""
 	}
 	n := len(p.held)
+	p.broken = true
 	p.held = p.held[:min(n, fewHeldRows)]
 	return fmt.Sprintf("%d rows up to line %d can't be counted, which is too many to hold one by one; the first: %s", n, p.recs.line, p.first)
 }

@@ -43,6 +43,7 @@ type flaw struct {
 	sentence string
 	field    int // counted from 1; 0 where it is about the whole record
 	whole    bool
+	open     bool // more text could close it
 }
 
 // reset begins with a text.
@@ -205,7 +206,7 @@ func (r *records) inQuotes(from int) (int, *flaw) {
 	for {
 		n := bytes.IndexByte(r.text[at:], '"')
 		if n < 0 {
-			return len(r.text), &flaw{whole: true, sentence: "read a quote that opens a field and is not closed; expected a closing quote before the end of the file"}
+			return len(r.text), &flaw{whole: true, open: true, sentence: "read a quote that opens a field and is not closed; expected a closing quote before the end of the file"}
 		}
 		at += n
 		if at-from > longestRecord {

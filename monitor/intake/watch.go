@@ -28,6 +28,8 @@ type Arrival struct {
 	Content []byte // what was read; nil where nothing was
 	Able    bool   // about the source: it can be looked at
 	Why     string // it can't
+
+	Progress *Progress // of a growing file: to be committed with its reading
 }
 
 // Known says whether a file of that name, size and modification time has been dealt with.
@@ -53,6 +55,13 @@ func Watch(ctx context.Context, src *config.Source, plan *rules.Plan, known Know
 	newWatcher(src, plan, known, out).watch(ctx)
 }
 
+// Follow is Watch for a source whose files grow: see Reader.Grow. Grown is the progress of its
+// files as it was committed. Whole new records are sent soon after they are written: a file is
+// looked at no more often than every Settle, but need not stand still that long.
+func Follow(ctx context.Context, src *config.Source, plan *rules.Plan, grown []*Progress, out chan<- Arrival) {
+	newFollower(src, plan, grown, out).watch(ctx)
+}
+
 // watcher is one source being watched. What stands above the line belongs to the one goroutine
 // of run.
 type watcher struct {
@@ -71,6 +80,7 @@ type watcher struct {
 	ready    []*candidate // that have, the oldest first
 	sent     map[string]sentFile
 	passed   map[string]sentFile // what is no plain file
+	growing  *growing            // nil where files arrive whole
 
 	// ————
 	patience  time.Duration
