@@ -146,7 +146,8 @@ func (c *clock) find(wall, nano int64, text []byte, line int) (ns int64, sentenc
 	first, final, n := c.instants(wall)
 	switch n {
 	case 0:
-		return 0, fmt.Sprintf("read %s, which the clocks of %s passed over when they were put forward; expected a time that they showed", quote(text), c.zone)
+		return 0, fmt.Sprintf("read %s, which the clocks of %s passed over when they were put forward; "+
+			"expected a time that they showed", quote(text), c.zone)
 	case 1:
 		return first*1e9 + nano, ""
 	}
@@ -228,7 +229,8 @@ func (r *reading) wall() (int64, string) {
 	case r.parts[partHour] > 23 || r.parts[partMinute] > 59 || r.parts[partSecond] > 59:
 		return 0, "the day has no such hour, minute or second"
 	}
-	return int64(days(y, m, d))*86400 + int64(r.parts[partHour]*3600+r.parts[partMinute]*60+r.parts[partSecond]), ""
+	second := r.parts[partHour]*3600 + r.parts[partMinute]*60 + r.parts[partSecond]
+	return int64(days(y, m, d))*86400 + int64(second), ""
 }
 
 func daysIn(y, m int) int {

@@ -37,7 +37,8 @@ func (w *watcher) scan(ctx context.Context) {
 	w.nextScan = time.Now().Add(w.src.Scan)
 	if anew {
 		w.report(ctx, func(c *condition) {
-			c.trouble = fmt.Sprintf("%s is another folder than before: it was made anew, or a file system was mounted over it", w.src.Folder)
+			c.trouble = fmt.Sprintf("%s is another folder than before: it was made anew, or a file system was mounted over it",
+				w.src.Folder)
 		})
 	}
 	w.report(ctx, func(c *condition) { c.trouble = "" })
@@ -191,8 +192,8 @@ func (w *watcher) passOver(ctx context.Context, info fs.FileInfo) {
 	now := stamp{info.Size(), info.ModTime()}
 	if !ok || s.kind != kind {
 		w.drop(name)
-		if !w.known(name, now.size, now.written) &&
-			!w.send(ctx, Arrival{File: name, Size: now.size, Written: now.written, Reading: w.unread(name, now.size, kindOf(kind))}) {
+		a := Arrival{File: name, Size: now.size, Written: now.written, Reading: w.unread(name, now.size, kindOf(kind))}
+		if !w.known(name, now.size, now.written) && !w.send(ctx, a) {
 			return
 		}
 	}
@@ -219,7 +220,7 @@ func kindOf(m fs.FileMode) string {
 
 // unread is the reading of a file that is held without being read.
 func (w *watcher) unread(name string, size int64, why string) *Reading {
-	return &Reading{Held: &rules.Held{Source: w.src.Name, File: name, Size: size, Reason: fmt.Sprintf("%s: %s", shown(name), why)}}
+	return &Reading{Held: &rules.Held{Source: w.src.Name, File: name, Size: size, Reason: shown(name) + ": " + why}}
 }
 
 // errMoving says that a file changed while it was read, or that it is another one.
@@ -272,7 +273,8 @@ func (w *watcher) content(name string, expected stamp) (content []byte, seen sta
 		return nil, seen, "", errMoving
 	}
 	if seen.size > w.src.Largest {
-		return nil, seen, fmt.Sprintf("it has %d bytes; at most %d were expected (`largest` of the source), so it was not read", seen.size, w.src.Largest), nil
+		return nil, seen, fmt.Sprintf("it has %d bytes; at most %d were expected (`largest` of the source), so it was not read",
+			seen.size, w.src.Largest), nil
 	}
 	if content, err = w.readAll(file, seen.size); err != nil {
 		return nil, seen, "", err

@@ -67,7 +67,10 @@ func (w *watcher) follow(ctx context.Context, c *candidate) {
 		was := g.progress[c.name]
 		thorough := time.Since(g.compared[c.name]) > comparedEvery
 		w.ask()
-		growth, err := w.reader.Grow(c.name, seen.written, answering{w, file}, seen.size, was, g.others(c.name), seen.same(c.stamp), thorough)
+		gained, err := w.reader.grow(&sight{
+			file: c.name, content: answering{w, file}, size: seen.size, written: seen.written,
+			settled: seen.same(c.stamp), thorough: thorough,
+		}, was, g.others(c.name))
 		w.answered()
 		switch {
 		case errors.Is(err, errUnsettled) && !seen.same(c.stamp):
@@ -81,15 +84,15 @@ func (w *watcher) follow(ctx context.Context, c *candidate) {
 			w.failed(ctx, c, seen, err)
 			return
 		}
-		if growth.Reading != nil && !w.send(ctx, Arrival{
-			File: c.name, Size: seen.size, Written: seen.written, Reading: growth.Reading, Progress: growth.Now,
+		if gained.Reading != nil && !w.send(ctx, Arrival{
+			File: c.name, Size: seen.size, Written: seen.written, Reading: gained.Reading, Progress: gained.Now,
 		}) {
 			return
 		}
 		if thorough {
 			g.compared[c.name] = time.Now()
 		}
-		g.progress[c.name], more = growth.Now, growth.More
+		g.progress[c.name], more = gained.Now, gained.More
 		delete(g.unclear, c.name)
 	}
 	w.drop(c.name)

@@ -46,8 +46,8 @@ type Mark struct {
 	SHA256 string `json:"sha256"`
 }
 
-// Growth is what a look at a growing file came to.
-type Growth struct {
+// growth is what a look at a growing file came to.
+type growth struct {
 	Reading *Reading // nil where there is nothing to tell
 	Now     *Progress
 	More    bool // the look ended before the end of what can be read
@@ -64,43 +64,39 @@ const (
 // it can be said what it is.
 var errUnsettled = errors.New("the file is not what it was")
 
-// Grow looks at a growing file, of which size bytes can be read, and reads the whole records
-// that it has gained, up to a bound. What it reads after the last line end is not yet a record,
-// nor is what stands in an open quote, nor are zero bytes at the end.
-//
-// Was is the progress under this name, others are those under other names of the source. The
-// content decides:
-//
-//   - it begins with what was dealt with: it is continued;
-//   - under a new name it begins with what was dealt with under another: it was renamed or
-//     copied, and is continued from there;
-//   - not even the first rows are those that were: it is another file under the old name, and
-//     is read from its start;
-//   - it has lost rows, or some within it have changed, or it begins like another and goes on
-//     differently: nothing of it is taken until that is over, and it is held.
-//
-// The last is not said of a file that still moves: a rig that writes its file anew each time
-// passes through such states. With settled unset, the error is errUnsettled then. Thorough
-// compares all that was dealt with, and not only the end of it.
-func (r *Reader) Grow(file string, written time.Time, content io.ReaderAt, size int64, was *Progress, others []*Progress, settled, thorough bool) (*Growth, error) {
+// sight is a growing file as it is looked at.
+type sight struct {
+	file     string
+	content  io.ReaderAt
+	size     int64 // bytes that can be read
+	written  time.Time
+	settled  bool // it has stood still
+	thorough bool // all that was dealt with is to be compared, and not only the end of it
+}
+
+// grow looks at a growing file and reads the whole records that it has gained, up to a bound.
+// Was is the progress under this name, nil where there is none; others are those under other
+// names. What it decides is told at Follow; what must not be said of a file that still moves is
+// errUnsettled.
+func (r *Reader) grow(s *sight, was *Progress, others []*Progress) (*growth, error) {
+	now := &Progress{File: s.file}
 	if r.src.Form.Encoding == "utf-16" {
-		return r.stop(&Progress{File: file}, size, written, "a file that grows is expected in UTF-8 or windows-1252, and this source declares UTF-16"), nil
+		return r.stop(now, s, "a file that grows is expected in UTF-8 or windows-1252, and this source declares UTF-16"), nil
 	}
-	now := &Progress{File: file}
 	var err error
 	if was != nil {
-		now, err = was.compare(content, size, settled, thorough)
+		now, err = was.compare(s)
 	}
 	if err == nil && now.Offset == 0 && now.Stopped == "" {
-		now, err = now.find(content, size, others, settled)
+		now, err = now.find(s, others)
 	}
 	if err != nil {
 		return nil, err
 	}
-	now.Size, now.Written = size, written
-	g := r.stop(now, size, written, now.Stopped)
+	now.Size, now.Written = s.size, s.written
+	g := r.stop(now, s, "%s", now.Stopped)
 	if now.Stopped == "" {
-		if g, err = r.gain(now, content, size, written, settled); err != nil {
+		if g, err = r.gain(now, s); err != nil {
 			return nil, err
 		}
 	}
@@ -111,15 +107,15 @@ func (r *Reader) Grow(file string, written time.Time, content io.ReaderAt, size 
 }
 
 // stop is a growth that holds the file.
-func (r *Reader) stop(now *Progress, size int64, written time.Time, sentence string) *Growth {
-	now.Size, now.Written, now.Stopped = size, written, sentence
-	return &Growth{Now: now, Reading: &Reading{Held: &rules.Held{
-		Source: r.src.Name, File: now.File, Size: size, Reason: shown(now.File) + ": " + sentence,
+func (r *Reader) stop(now *Progress, s *sight, format string, args ...any) *growth {
+	now.Size, now.Written, now.Stopped = s.size, s.written, fmt.Sprintf(format, args...)
+	return &growth{Now: now, Reading: &Reading{Held: &rules.Held{
+		Source: r.src.Name, File: now.File, Size: s.size, Reason: shown(now.File) + ": " + now.Stopped,
 	}}}
 }
 
 // compare says what has become of a file: the progress to go on from.
-func (was *Progress) compare(content io.ReaderAt, size int64, settled, thorough bool) (*Progress, error) {
+func (was *Progress) compare(s *sight) (*Progress, error) {
 	now := *was
 	if !was.Broken {
 		now.Stopped = ""
@@ -127,8 +123,8 @@ func (was *Progress) compare(content io.ReaderAt, size int64, settled, thorough 
 	if was.Offset == 0 {
 		return &Progress{File: was.File, Earlier: was.Earlier}, nil
 	}
-	if size >= was.Offset && was.Stopped == "" && !thorough {
-		tail, err := tailOf(content, was.Offset)
+	if s.size >= was.Offset && was.Stopped == "" && !s.thorough {
+		tail, err := tailOf(s.content, was.Offset)
 		if err != nil || tail == was.Tail {
 			return &now, err
 		}
@@ -137,35 +133,37 @@ func (was *Progress) compare(content io.ReaderAt, size int64, settled, thorough 
 	if err != nil {
 		return nil, err
 	}
-	same, err := matched(content, size, marks)
+	same, err := matched(s.content, s.size, marks)
 	if err != nil {
 		return nil, err
 	}
 	switch {
 	case same == len(marks):
 		return &now, nil
-	case same == 0 && size < marks[0].Offset:
+	case same == 0 && s.size < marks[0].Offset:
 		return nil, errUnsettled // too little to say
 	case same == 0:
 		old := *was
 		old.Earlier = nil
 		earlier := append([]Progress{old}, was.Earlier...)
 		return &Progress{File: was.File, Earlier: earlier[:min(len(earlier), mostEarlier)]}, nil
-	case !settled:
+	case !s.settled:
 		return nil, errUnsettled
-	case size < marks[same].Offset:
-		now.Stopped = fmt.Sprintf("the file has %d bytes, and rows up to byte %d were dealt with before: rows that counted are no longer in it; "+
-			"expected rows to be added only. Nothing of it is taken until they are back, or it begins with other rows", size, was.Offset)
+	case s.size < marks[same].Offset:
+		now.Stopped = fmt.Sprintf("the file has %d bytes, and rows up to byte %d were dealt with before: "+
+			"rows that counted are no longer in it; expected rows to be added only. "+
+			"Nothing of it is taken until they are back, or it begins with other rows", s.size, was.Offset)
 	default:
-		now.Stopped = fmt.Sprintf("the file was changed between byte %d and byte %d, in rows that were dealt with before; expected rows to be added only. "+
-			"Nothing of it is taken until it is as it was, or begins with other rows", marks[same-1].Offset, marks[same].Offset)
+		now.Stopped = fmt.Sprintf("the file was changed between byte %d and byte %d, in rows that were dealt with before; "+
+			"expected rows to be added only. Nothing of it is taken until it is as it was, or begins with other rows",
+			marks[same-1].Offset, marks[same].Offset)
 	}
 	return &now, nil
 }
 
 // find looks for a file under the other names: a new name may be that of a file that was dealt
 // with, or of a copy of it that is still being made.
-func (p *Progress) find(content io.ReaderAt, size int64, others []*Progress, settled bool) (*Progress, error) {
+func (p *Progress) find(s *sight, others []*Progress) (*Progress, error) {
 	best := &Progress{File: p.File, Earlier: p.Earlier}
 	for _, o := range withEarlier(p, others) {
 		if o.Offset <= best.Offset {
@@ -175,7 +173,7 @@ func (p *Progress) find(content io.ReaderAt, size int64, others []*Progress, set
 		if err != nil {
 			return nil, err
 		}
-		same, err := matched(content, size, marks)
+		same, err := matched(s.content, s.size, marks)
 		switch {
 		case err != nil:
 			return nil, err
@@ -183,11 +181,12 @@ func (p *Progress) find(content io.ReaderAt, size int64, others []*Progress, set
 			found := *o
 			found.File, found.Earlier, best = p.File, p.Earlier, &found
 		case same == 0 || best.Offset > 0:
-		case size < marks[same].Offset || !settled:
+		case s.size < marks[same].Offset || !s.settled:
 			return nil, errUnsettled
 		default:
-			best.Stopped = fmt.Sprintf("the file begins with rows that were dealt with as %s, and differs from that between byte %d and byte %d; "+
-				"expected a file of its own, or a whole copy", shown(o.File), marks[same-1].Offset, marks[same].Offset)
+			best.Stopped = fmt.Sprintf("the file begins with rows that were dealt with as %s, "+
+				"and differs from that between byte %d and byte %d; expected a file of its own, or a whole copy",
+				shown(o.File), marks[same-1].Offset, marks[same].Offset)
 		}
 	}
 	if best.Offset > 0 && !best.Broken {
@@ -271,32 +270,31 @@ func hashOf(digest []byte) (hash.Hash, error) {
 }
 
 // gain reads the records that a file has gained.
-func (r *Reader) gain(now *Progress, content io.ReaderAt, size int64, written time.Time, settled bool) (*Growth, error) {
+func (r *Reader) gain(now *Progress, s *sight) (*growth, error) {
 	from := now.Offset
-	text := make([]byte, min(size-from, longestStretch))
-	n, err := content.ReadAt(text, from)
+	text := make([]byte, min(s.size-from, longestStretch))
+	n, err := s.content.ReadAt(text, from)
 	if err != nil && !errors.Is(err, io.EOF) {
 		return nil, err
 	}
 	text = text[:n]
-	whole := from+int64(n) >= size
+	whole := from+int64(n) >= s.size
 	zero := bytes.IndexByte(text, 0)
 	if zero >= 0 {
 		text = text[:zero]
 	}
 	e := r.extent(text, from == 0)
-	g := &Growth{Now: now}
-	if e.end == 0 {
-		if len(text) > longestHead+longestRecord {
-			return r.stop(now, size, written, fmt.Sprintf("no record ends within %d bytes behind line %d; expected rows", len(text), now.Lines)), nil
-		}
-		if zero >= 0 && !settled {
-			return nil, errUnsettled
-		}
-		if zero >= 0 {
-			return r.stop(now, size, written, fmt.Sprintf("the file has zero bytes behind byte %d, which are no text; expected rows. "+
-				"What is behind line %d waits until they have turned into text", from+int64(zero), now.Lines)), nil
-		}
+	g := &growth{Now: now}
+	switch {
+	case e.end > 0:
+	case len(text) > longestHead+longestRecord:
+		return r.stop(now, s, "no record ends within %d bytes behind line %d; expected rows", len(text), now.Lines), nil
+	case zero >= 0 && !s.settled:
+		return nil, errUnsettled
+	case zero >= 0:
+		return r.stop(now, s, "the file has zero bytes behind byte %d, which are no text; expected rows. "+
+			"What is behind line %d waits until they have turned into text", from+int64(zero), now.Lines), nil
+	default:
 		return g, nil // nothing whole yet
 	}
 	before := now.Lines
@@ -305,7 +303,7 @@ func (r *Reader) gain(now *Progress, content io.ReaderAt, size int64, written ti
 		before = bytes.Count(now.Head, []byte("\n"))
 	}
 	reading := &Reading{}
-	r.read(reading, now.File, written, append(slices.Clip(now.Head), text[e.head:e.end]...), before, now.Last)
+	r.read(reading, now.File, s.written, append(slices.Clip(now.Head), text[e.head:e.end]...), before, now.Last)
 	if reading.headed && e.end == e.head {
 		return g, nil // a header, and no row yet
 	}
@@ -319,7 +317,7 @@ func (r *Reader) gain(now *Progress, content io.ReaderAt, size int64, written ti
 		now.Stopped, now.Broken = reading.Held.Reason, true
 	}
 	now.Last = reading.last
-	if err := now.advance(text[:e.end], int64(e.first), content); err != nil {
+	if err := now.advance(text[:e.end], int64(e.first), s.content); err != nil {
 		return nil, err
 	}
 	g.More = (!whole || zero >= 0) && now.Stopped == ""
@@ -379,7 +377,7 @@ func (r *Reader) extent(text []byte, start bool) (e extent) {
 
 // seal puts the place of a stretch into its reading. Its digest is that of the file up to the
 // end of the stretch: two stretches may read the same, and yet both count.
-func (r *Reader) seal(g *Growth, from int64) error {
+func (r *Reader) seal(g *growth, from int64) error {
 	if g.Reading == nil {
 		return nil
 	}

@@ -44,7 +44,10 @@ func (r *rig) look(t failer, name string, settled, thorough bool) bool {
 				others = append(others, p)
 			}
 		}
-		g, err := r.reader.Grow(name, written, bytes.NewReader(content), int64(len(content)), r.known[name], others, settled, thorough)
+		g, err := r.reader.grow(&sight{
+			file: name, content: bytes.NewReader(content), size: int64(len(content)), written: written,
+			settled: settled, thorough: thorough,
+		}, r.known[name], others)
 		if errors.Is(err, errUnsettled) {
 			return false
 		}
@@ -62,7 +65,7 @@ func (r *rig) look(t failer, name string, settled, thorough bool) bool {
 }
 
 // take commits a growth.
-func (r *rig) take(t failer, g *Growth) {
+func (r *rig) take(t failer, g *growth) {
 	state, err := json.Marshal(g.Now)
 	if err != nil {
 		t.Fatalf("%v", err)

@@ -72,7 +72,8 @@ func (p *pass) place() (sentence string) {
 				missing = append(missing, q+p.near(name))
 			}
 		} else if next := slices.Index(p.names[at+1:], name); next >= 0 && sentence == "" {
-			sentence = fmt.Sprintf("the header has the column %q twice, as column %d and column %d; expected it once", name, at+1, at+next+2)
+			sentence = fmt.Sprintf("the header has the column %q twice, as column %d and column %d; expected it once",
+				name, at+1, at+next+2)
 		}
 		return at
 	}
@@ -108,7 +109,8 @@ func (p *pass) reads() string {
 		}
 	}
 	if most > 0 {
-		text += fmt.Sprintf(", one field when divided by %q: perhaps the \"delimiter\" of the source is to be %q", p.recs.comma, by)
+		text += fmt.Sprintf(", one field when divided by %q: perhaps the \"delimiter\" of the source is to be %q",
+			p.recs.comma, by)
 	}
 	return text
 }

@@ -147,7 +147,7 @@ func (w *watcher) take(ctx context.Context, c *candidate) {
 func (w *watcher) failed(ctx context.Context, c *candidate, seen stamp, err error) {
 	switch {
 	case errors.Is(err, errFolder):
-		w.delay(c, longestRetry)
+		w.delay(c, min(w.src.Scan, longestRetry))
 		w.nextScan = time.Now()
 	case errors.Is(err, fs.ErrNotExist):
 		w.drop(c.name)

@@ -76,7 +76,9 @@ type measure struct {
 // NewReader makes the reader of a source under a plan. Both must come from one checked
 // configuration: a source that does not fit its plan holds every file, with a sentence.
 func NewReader(src *config.Source, plan *rules.Plan) *Reader {
-	r := &Reader{src: src, lineOf: map[string]int{}, fixed: -1, noValue: src.Form.NoValue, still: newClock(&src.Form)}
+	r := &Reader{
+		src: src, lineOf: map[string]int{}, fixed: -1, noValue: src.Form.NoValue, still: newClock(&src.Form),
+	}
 	r.desks.New = func() any { return newDesk(r) }
 	for i := range src.Columns.Measured {
 		m := &src.Columns.Measured[i]
@@ -103,7 +105,8 @@ func NewReader(src *config.Source, plan *rules.Plan) *Reader {
 	if src.Columns.Line == "" {
 		var ok bool
 		if r.fixed, ok = r.lineOf[src.Columns.LineIs]; !ok {
-			r.unfit = fmt.Sprintf("the source is about the line %q, on which none of its characteristics is measured", src.Columns.LineIs)
+			r.unfit = fmt.Sprintf("the source is about the line %q, on which none of its characteristics is measured",
+				src.Columns.LineIs)
 		}
 	}
 	return r
@@ -189,7 +192,8 @@ func (p *pass) read(content []byte) (sentence string) {
 	p.recs.reset(text, p.src.Form.Delimiter)
 	for i := range p.src.Form.Preamble {
 		if !p.recs.skip() {
-			return fmt.Sprintf("the file ends after %d lines; expected a header behind %d lines that come first (\"preamble\")", i+1, p.src.Form.Preamble)
+			return fmt.Sprintf("the file ends after %d lines; expected a header behind %d lines that come first (\"preamble\")",
+				i+1, p.src.Form.Preamble)
 		}
 	}
 	if sentence := p.header(); sentence != "" {
@@ -217,7 +221,7 @@ func (p *pass) records() (sentence string) {
 		case bad != nil && bad.whole:
 			return p.misread(bad)
 		case bad != nil:
-			p.hold(bad.field, bad.sentence)
+			p.hold(bad.field, "%s", bad.sentence)
 		default:
 			p.row()
 		}
@@ -254,7 +258,8 @@ func (p *pass) tooMuch() string {
 	n := len(p.held)
 	p.broken = true
 	p.held = p.held[:min(n, fewHeldRows)]
-	return fmt.Sprintf("%d rows up to line %d can't be counted, which is too many to hold one by one; the first: %s", n, p.recs.line, p.first)
+	return fmt.Sprintf("%d rows up to line %d can't be counted, which is too many to hold one by one; the first: %s",
+		n, p.recs.line, p.first)
 }
 
 // nothing says why a file without a fault has nothing to count.

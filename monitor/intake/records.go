@@ -48,7 +48,10 @@ type flaw struct {
 
 // reset begins with a text.
 func (r *records) reset(text []byte, comma byte) {
-	*r = records{text: text, comma: comma, plain: bytes.IndexByte(text, '"') < 0, next: 1, fields: r.fields[:0], undone: r.undone[:0]}
+	*r = records{
+		text: text, comma: comma, plain: bytes.IndexByte(text, '"') < 0, next: 1,
+		fields: r.fields[:0], undone: r.undone[:0],
+	}
 }
 
 // skip passes over a line, whatever is in it.
@@ -206,11 +209,13 @@ func (r *records) inQuotes(from int) (int, *flaw) {
 	for {
 		n := bytes.IndexByte(r.text[at:], '"')
 		if n < 0 {
-			return len(r.text), &flaw{whole: true, open: true, sentence: "read a quote that opens a field and is not closed; expected a closing quote before the end of the file"}
+			return len(r.text), &flaw{whole: true, open: true, sentence: "read a quote that opens a field and is not closed; " +
+				"expected a closing quote before the end of the file"}
 		}
 		at += n
 		if at-from > longestRecord {
-			return at, &flaw{whole: true, sentence: fmt.Sprintf("read a quote that opens a field and is not closed within %d bytes; expected a closing quote", longestRecord)}
+			return at, &flaw{whole: true, sentence: fmt.Sprintf("read a quote that opens a field and is not closed within %d bytes; "+
+				"expected a closing quote", longestRecord)}
 		}
 		if at+1 == len(r.text) || r.text[at+1] != '"' {
 			break
@@ -227,7 +232,8 @@ func (r *records) inQuotes(from int) (int, *flaw) {
 		}
 	}
 	if after := at + 1; after < len(r.text) && r.text[after] != r.comma && !r.lineEnds(after) {
-		return after, &flaw{whole: lines > 0, sentence: fmt.Sprintf("read a closing quote and behind it %s; expected %q or the end of the row", quote(r.text[after:after+1]), r.comma)}
+		return after, &flaw{whole: lines > 0, sentence: fmt.Sprintf("read a closing quote and behind it %s; "+
+			"expected %q or the end of the row", quote(r.text[after:after+1]), r.comma)}
 	}
 	if doubled || lines > 0 {
 		r.fields = append(r.fields, r.undo(r.text[from:at]))

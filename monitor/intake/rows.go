@@ -73,7 +73,7 @@ func (p *pass) leave() {
 func (p *pass) row() {
 	if len(p.recs.fields) != len(p.names) {
 		if !p.isBlank() {
-			p.hold(0, fmt.Sprintf("read %d fields; expected %d, as many as the header has", len(p.recs.fields), len(p.names)))
+			p.hold(0, "read %d fields; expected %d, as many as the header has", len(p.recs.fields), len(p.names))
 		}
 		return
 	}
@@ -94,7 +94,7 @@ func (p *pass) row() {
 	if p.at.time >= 0 {
 		var sentence string
 		if ns, sentence = p.clock.read(trim(p.recs.field(p.at.time)), p.recs.line); sentence != "" {
-			p.hold(p.at.time+1, sentence)
+			p.hold(p.at.time+1, "%s", sentence)
 			return
 		}
 	}
@@ -134,7 +134,7 @@ func (p *pass) isText() bool {
 			break
 		}
 	}
-	p.hold(at, `read bytes that are not UTF-8; expected text in UTF-8, or another "encoding" of the source declared`)
+	p.hold(at, `read bytes that are not UTF-8; expected text in UTF-8, or another "encoding" of the source`)
 	return false
 }
 
@@ -176,7 +176,7 @@ func (p *pass) onLine() (on int, ok bool) {
 			if n := claim.Nearest(string(text), p.lines); n != "" {
 				near = fmt.Sprintf(" (did you mean %q?)", n)
 			}
-			p.hold(p.at.line+1, fmt.Sprintf("read the line %s; expected one of %s%s", quote(text), quotes(p.lines), near))
+			p.hold(p.at.line+1, "read the line %s; expected one of %s%s", quote(text), quotes(p.lines), near)
 			return 0, false
 		}
 	}
@@ -185,8 +185,8 @@ func (p *pass) onLine() (on int, ok bool) {
 			continue
 		}
 		if m := &p.measures[i]; p.now[i].text != nil && !m.on[on] {
-			p.hold(p.at.value[i]+1, fmt.Sprintf("read %s for the line %q; expected no value, or a line on which %s is measured: %s",
-				quote(p.now[i].text), p.lines[on], m.Characteristic.Name, quotes(m.Lines)))
+			p.hold(p.at.value[i]+1, "read %s for the line %q; expected no value, or a line on which %s is measured: %s",
+				quote(p.now[i].text), p.lines[on], m.Characteristic.Name, quotes(m.Lines))
 			return 0, false
 		}
 	}
@@ -197,7 +197,8 @@ func (p *pass) onLine() (on int, ok bool) {
 func (p *pass) serial() (serial []byte, ok bool) {
 	serial = trim(p.recs.field(p.at.serial))
 	if len(serial) > longestSerial {
-		p.hold(p.at.serial+1, fmt.Sprintf("read %s, which is %d bytes long; expected a serial of at most %d", quote(serial), len(serial), longestSerial))
+		p.hold(p.at.serial+1, "read %s, which is %d bytes long; expected a serial of at most %d",
+			quote(serial), len(serial), longestSerial)
 		return nil, false
 	}
 	for i, b := range serial {
@@ -207,7 +208,7 @@ func (p *pass) serial() (serial []byte, ok bool) {
 		if r, _ := utf8.DecodeRune(serial[i:]); b >= utf8.RuneSelf && (r == utf8.RuneError || unicode.IsPrint(r)) {
 			continue // a printable character, or the inside of one: the row is known to be UTF-8
 		}
-		p.hold(p.at.serial+1, fmt.Sprintf("read %s; expected a serial of signs that can be printed", quote(serial)))
+		p.hold(p.at.serial+1, "read %s; expected a serial of signs that can be printed", quote(serial))
 		return nil, false
 	}
 	return serial, true
@@ -220,7 +221,7 @@ func (p *pass) measurement(i, on int) bool {
 	var sentence string
 	if at := p.at.of[i]; at >= 0 {
 		if c.of, sentence = p.numbers.read(trim(p.recs.field(at))); sentence != "" {
-			p.hold(at+1, sentence)
+			p.hold(at+1, "%s", sentence)
 			return false
 		}
 	}
@@ -231,11 +232,12 @@ func (p *pass) measurement(i, on int) bool {
 		case slices.Contains(m.Fail, string(c.text)):
 			c.value = 1
 		default:
-			p.hold(p.at.value[i]+1, fmt.Sprintf("read %s; expected %s where the unit passed or %s where it failed", quote(c.text), quotes(m.Pass), quotes(m.Fail)))
+			p.hold(p.at.value[i]+1, "read %s; expected %s where the unit passed or %s where it failed",
+				quote(c.text), quotes(m.Pass), quotes(m.Fail))
 			return false
 		}
 	} else if c.value, sentence = p.numbers.read(c.text); sentence != "" {
-		p.hold(p.at.value[i]+1, sentence)
+		p.hold(p.at.value[i]+1, "%s", sentence)
 		return false
 	}
 	if m.Scale != 1 || m.Offset != 0 {
@@ -244,7 +246,7 @@ func (p *pass) measurement(i, on int) bool {
 		c.value = float64(c.value*m.Scale) + m.Offset
 	}
 	if sentence = p.unfitValue(m, c); sentence != "" {
-		p.hold(p.at.value[i]+1, sentence)
+		p.hold(p.at.value[i]+1, "%s", sentence)
 		return false
 	}
 	return true
@@ -256,7 +258,8 @@ func (p *pass) unfitValue(m *measure, c *cell) string {
 		return fmt.Sprintf("read %s: %v", quote(c.text), err)
 	}
 	if c.value < m.Measured.Lower || c.value > m.Measured.Upper {
-		return fmt.Sprintf("read %s, which is %v %s; expected a plausible value, %v to %v", quote(c.text), c.value, m.Unit, m.Measured.Lower, m.Measured.Upper)
+		return fmt.Sprintf("read %s, which is %v %s; expected a plausible value, %v to %v",
+			quote(c.text), c.value, m.Unit, m.Measured.Lower, m.Measured.Upper)
 	}
 	return ""
 }
@@ -297,19 +300,21 @@ func (s *column) add(row int, value, of float64) {
 
 // hold holds the current record for a reason in one of its columns, counted from 1; 0 where it
 // is about the whole record.
-func (p *pass) hold(number int, sentence string) {
+func (p *pass) hold(number int, format string, args ...any) {
 	name := ""
 	if number > 0 && number <= len(p.names) {
 		name = p.names[number-1]
 	}
 	text, cut := kept(p.recs.raw())
 	p.Cut = p.Cut || cut
-	reason := fmt.Sprintf("line %d: %s%s", p.recs.line, p.column(number), sentence)
+	reason := fmt.Sprintf("line %d: %s%s", p.recs.line, p.column(number), fmt.Sprintf(format, args...))
 	if len(p.held) == 0 {
 		p.first = reason
 	}
 	p.heldText += len(text)
-	p.held = append(p.held, rules.HeldRow{Line: p.recs.line, Column: name, Text: text, Reason: shown(p.file) + ", " + reason})
+	p.held = append(p.held, rules.HeldRow{
+		Line: p.recs.line, Column: name, Text: text, Reason: shown(p.file) + ", " + reason,
+	})
 }
 
 // handOver takes numbers off the desk: by a copy, or, where there are many, the desk's own.
@@ -351,7 +356,9 @@ func (p *pass) allSeries() []rules.Series {
 			if len(s.row) == 0 {
 				continue
 			}
-			series := rules.Series{Process: rules.ProcessName(m.Characteristic.Name, line), Row: handOver(&s.row), Value: handOver(&s.value)}
+			series := rules.Series{
+				Process: rules.ProcessName(m.Characteristic.Name, line), Row: handOver(&s.row), Value: handOver(&s.value),
+			}
 			if len(s.of) > 0 {
 				series.Of = handOver(&s.of)
 			}

@@ -85,7 +85,7 @@ var situations = []situation{
 	},
 	{
 		"windows-1252 not declared", nil, someHeader + "2026-03-02T10:41:07Z,L1,\xc4-1,33.4,8.01\n" + row1,
-		`2 held: r1.csv, line 2: column 3 ("Serial"): read bytes that are not UTF-8; expected text in UTF-8, or another "encoding" of the source declared | "2026-03-02T10:41:07Z,L1,\\xc4-1,33.4,8.01"
+		`2 held: r1.csv, line 2: column 3 ("Serial"): read bytes that are not UTF-8; expected text in UTF-8, or another "encoding" of the source | "2026-03-02T10:41:07Z,L1,\\xc4-1,33.4,8.01"
 3 2026-03-02T10:41:07Z L1 "P-1" head=33.4 bore=8.01`,
 	},
 	{"decimal comma", german, "Serial;Head kPa;Bore mm;Line;Tested at\nP-1;33,4;8,01;L1;02.03.2026 10:41:07\n", got1},

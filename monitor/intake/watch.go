@@ -55,9 +55,21 @@ func Watch(ctx context.Context, src *config.Source, plan *rules.Plan, known Know
 	newWatcher(src, plan, known, out).watch(ctx)
 }
 
-// Follow is Watch for a source whose files grow: see Reader.Grow. Grown is the progress of its
-// files as it was committed. Whole new records are sent soon after they are written: a file is
-// looked at no more often than every Settle, but need not stand still that long.
+// Follow is Watch for a source whose files grow. Grown is the progress of its files as it was
+// committed. Whole new records are sent soon after they are written: a file is looked at no
+// more often than every Settle, but need not stand still that long. What is behind the last
+// line end is not yet a record, nor is what stands in an open quote, nor are zero bytes.
+//
+// The content decides what a file is, not its name or number:
+//
+//   - it begins with what was dealt with: it is continued;
+//   - under a new name it begins with what was dealt with under another: it was renamed or
+//     copied, and is continued from there;
+//   - not even its first row is the one that was: it is another file under the old name, and is
+//     read from its start;
+//   - it has lost rows, or some within it have changed, or it begins like another and goes on
+//     differently: nothing of it is taken until that is over, and it is held. This is not said
+//     of a file that still moves: a rig that writes its file anew each time passes through it.
 func Follow(ctx context.Context, src *config.Source, plan *rules.Plan, grown []*Progress, out chan<- Arrival) {
 	newFollower(src, plan, grown, out).watch(ctx)
 }
@@ -85,7 +97,7 @@ type watcher struct {
 	// ————
 	patience  time.Duration
 	soonest   time.Duration
-	asked     atomic.Int64 // since when the folder has been asked something, ns on the monotonic clock; 0: it is not
+	asked     atomic.Int64 // since when an answer of the folder is awaited, ns after begun; 0: none is
 	begun     time.Time
 	condition condition
 }
@@ -99,7 +111,8 @@ type sentFile struct {
 
 func newWatcher(src *config.Source, plan *rules.Plan, known Known, out chan<- Arrival) *watcher {
 	return &watcher{
-		src: src, reader: NewReader(src, plan), known: known, out: out, patience: patience, soonest: soonest, begun: time.Now(),
+		src: src, reader: NewReader(src, plan), known: known, out: out,
+		patience: patience, soonest: soonest, begun: time.Now(),
 		waiting: map[string]*candidate{}, sent: map[string]sentFile{}, passed: map[string]sentFile{},
 	}
 }
