@@ -44,16 +44,21 @@ func (r Remember) Check() error {
 
 // Memory holds the measurements of one process that count, as its Remember has it. What it
 // says depends on the measurements and their places in the sequence only, never on when it
-// was saved and loaded: a replay in one go gives the same bits.
+// was saved and loaded, nor (but for a discount) on how they were cut into batches: a replay in
+// one go gives the same bits. It is not safe for concurrent use.
 //
 //   - segment: one running Sums.
 //   - units: the last N observations themselves, in chunks of 64 by their place in the sequence;
-//     the chunks are merged in order, and nothing is ever subtracted.
+//     the chunks are merged in order, and nothing is ever subtracted. An observation is one row,
+//     also where it is a count of many.
 //   - hours: Sums of steps of time, each 1/240 of the window, merged in order; measurements
-//     leave by whole steps. One that is older than the window on arrival never counts.
-//   - discount: before each batch what was there is scaled by the factor (power discount;
-//     Kulhavý & Zarrop, International Journal of Control 58, 1993), which with a prior pulls
-//     the belief towards it.
+//     leave by whole steps, so that what counts is the last 239/240 of the window for certain and
+//     the last window at most. "Now" is the latest time that a measurement or Pass has named; one
+//     that is older than the window on arrival never counts.
+//   - discount: before each batch, an empty one too, what was there is scaled by the factor (power
+//     discount; Kulhavý & Zarrop, International Journal of Control 58, 1993), which with a prior pulls
+//     the belief towards it. With n units a batch it comes to rest at n/(1-discount) units. At one
+//     effective unit or fewer a posterior under the reference prior is not Proper.
 type Memory struct {
 	family   Family
 	remember Remember
@@ -62,12 +67,16 @@ type Memory struct {
 
 	values []float64 // units: the last observations, from place first on
 	of     []float64
+	logs   []pair // lognormal: logarithms of values
 	first  int64
-	full   []Sums // sums of the whole chunks among values; the first belongs to chunk fullFrom
+	full   []Sums // sums of the whole chunks among values; the first belongs to chunk from
 	from   int64
 
 	steps []step // hours, ascending
 	now   int64  // the latest step that was reached
+
+	known   Sums // what Sums says, while isKnown
+	isKnown bool
 }
 
 // step is what was measured in one step of a window of time.
@@ -80,7 +89,12 @@ const chunk = 64        // observations merged as one in a window of units
 const windowSteps = 240 // of a window of time
 
 // NewMemory is an empty memory. Remember must have passed its Check.
-func NewMemory(f Family, r Remember) *Memory { return &Memory{family: f, remember: r} }
+func NewMemory(f Family, r Remember) *Memory {
+	return &Memory{family: f, remember: r, now: beforeTime}
+}
+
+// beforeTime is before every step of a window of time.
+const beforeTime = math.MinInt64 / 2
 
 // StartSegment forgets what was measured before.
 func (m *Memory) StartSegment() {
@@ -91,6 +105,7 @@ func (m *Memory) StartSegment() {
 // at is when each was measured, in nanoseconds since 1970 UTC, and is read only by a window of
 // time.
 func (m *Memory) AddBatch(values, of []float64, at []int64) {
+	m.isKnown = false
 	if m.remember.Discount != 0 {
 		m.sums = m.sums.Scale(m.remember.Discount)
 	}
@@ -102,7 +117,7 @@ func (m *Memory) AddBatch(values, of []float64, at []int64) {
 		}
 		switch {
 		case m.remember.Units != 0:
-			m.values, m.of = append(m.values, v), append(m.of, o)
+			m.keep(v, o)
 		case m.remember.Hours != 0:
 			m.addAt(v, o, at[i])
 		case m.remember.Discount != 0:
@@ -119,10 +134,21 @@ func (m *Memory) AddBatch(values, of []float64, at []int64) {
 	}
 }
 
+// keep takes one observation into a window of units.
+func (m *Memory) keep(value, of float64) {
+	m.values, m.of = append(m.values, value), append(m.of, of)
+	if m.family == LognormalFamily {
+		m.logs = append(m.logs, logPair(value))
+	}
+}
+
 // trim lets the oldest observations go and sums up the chunks that have become whole.
 func (m *Memory) trim() {
 	if over := len(m.values) - m.remember.Units; over > 0 {
 		m.values, m.of = slices.Delete(m.values, 0, over), slices.Delete(m.of, 0, over)
+		if m.logs != nil {
+			m.logs = slices.Delete(m.logs, 0, over)
+		}
 		m.first += int64(over)
 	}
 	firstWhole, end := (m.first+chunk-1)/chunk, (m.first+int64(len(m.values)))/chunk
@@ -139,6 +165,12 @@ func (m *Memory) trim() {
 
 // sumOf adds up the observations from one index up to another.
 func (m *Memory) sumOf(from, to int64) (s Sums) {
+	if m.family == LognormalFamily {
+		for _, x := range m.logs[from:to] {
+			s = s.push(x)
+		}
+		return s
+	}
 	for i := from; i < to; i++ {
 		s = s.Add(m.family, m.values[i], m.of[i])
 	}
@@ -171,7 +203,11 @@ func (m *Memory) Pass(at int64) bool {
 	}
 	before := len(m.steps)
 	m.reach(floorDiv(at, m.width()))
-	return len(m.steps) != before
+	if len(m.steps) == before {
+		return false
+	}
+	m.isKnown = false
+	return true
 }
 
 func (m *Memory) reach(n int64) {
@@ -195,21 +231,18 @@ func floorDiv(a, b int64) int64 {
 
 // Sums are the statistics of what is remembered.
 func (m *Memory) Sums() Sums {
-	var s Sums
+	if !m.isKnown {
+		m.known, m.isKnown = m.mergeAll(), true
+	}
+	return m.known
+}
+
+func (m *Memory) mergeAll() Sums {
 	switch {
 	case m.remember.Units != 0:
-		end := m.first + int64(len(m.values))
-		if len(m.full) == 0 {
-			// No whole chunk: at most one boundary lies within.
-			edge := min(max((m.first+chunk-1)/chunk*chunk, m.first), end)
-			return Merge(m.family, m.sumOf(0, edge-m.first), m.sumOf(edge-m.first, end-m.first))
-		}
-		s = m.sumOf(0, m.from*chunk-m.first)
-		for _, c := range m.full {
-			s = Merge(m.family, s, c)
-		}
-		return Merge(m.family, s, m.sumOf((m.from+int64(len(m.full)))*chunk-m.first, end-m.first))
+		return m.mergeChunks()
 	case m.remember.Hours != 0:
+		var s Sums
 		for _, t := range m.steps {
 			s = Merge(m.family, s, t.sums)
 		}
@@ -218,78 +251,17 @@ func (m *Memory) Sums() Sums {
 	return m.sums
 }
 
-// AppendBinary writes the memory: a version byte, then by what is remembered
-//
-//	segment, discount  Sums
-//	units              first (uvarint), count (uvarint), a byte that says whether `of` follows, values, of
-//	hours              now (varint), count (uvarint), then for each step its number (varint) and Sums
-//
-// with every float64 as 8 bytes, big-endian. A reader refuses a version it does not know.
-func (m *Memory) AppendBinary(b []byte) ([]byte, error) {
-	b = append(b, memoryVersion)
-	switch {
-	case m.remember.Units != 0:
-		b = appendUvarint(b, uint64(m.first))
-		b = appendUvarint(b, uint64(len(m.values)))
-		ones := !slices.ContainsFunc(m.of, func(o float64) bool { return o != 1 })
-		b = append(b, map[bool]byte{true: 0, false: 1}[ones])
-		b = appendFloats(b, m.values...)
-		if !ones {
-			b = appendFloats(b, m.of...)
-		}
-	case m.remember.Hours != 0:
-		b = appendVarint(b, m.now)
-		b = appendUvarint(b, uint64(len(m.steps)))
-		for _, t := range m.steps {
-			b = appendSums(appendVarint(b, t.at), t.sums)
-		}
-	default:
-		b = appendSums(b, m.sums)
+// mergeChunks merges what is left of the oldest chunk, the whole ones, and the newest.
+func (m *Memory) mergeChunks() Sums {
+	end := m.first + int64(len(m.values))
+	if len(m.full) == 0 {
+		// No whole chunk: at most one boundary lies within.
+		edge := min((m.first+chunk-1)/chunk*chunk, end)
+		return Merge(m.family, m.sumOf(0, edge-m.first), m.sumOf(edge-m.first, end-m.first))
 	}
-	return b, nil
-}
-
-const memoryVersion = 1
-
-// UnmarshalBinary takes what AppendBinary of a memory with the same family and Remember wrote.
-func (m *Memory) UnmarshalBinary(b []byte) error {
-	r := &reader{b: b}
-	if v := r.byte(); v != memoryVersion {
-		return fmt.Errorf("memory of version %d: version %d is what this program reads", v, memoryVersion)
+	s := m.sumOf(0, m.from*chunk-m.first)
+	for _, c := range m.full {
+		s = Merge(m.family, s, c)
 	}
-	*m = Memory{family: m.family, remember: m.remember}
-	switch {
-	case m.remember.Units != 0:
-		m.first = int64(r.uvarint())
-		n := r.count(8)
-		with := r.byte() == 1
-		m.values, m.of = r.floats(n), slices.Repeat([]float64{1}, n)
-		if with {
-			m.of = r.floats(n)
-		}
-		if r.err == nil {
-			m.trim()
-		}
-	case m.remember.Hours != 0:
-		m.now = r.varint()
-		for n := r.count(1); n > 0 && r.err == nil; n-- {
-			m.steps = append(m.steps, step{r.varint(), r.sums()})
-		}
-	default:
-		m.sums = r.sums()
-	}
-	if r.err == nil && len(r.b) > 0 {
-		r.err = fmt.Errorf("memory: %d bytes too many", len(r.b))
-	}
-	return r.err
-}
-
-// finiteSums says whether sums could have come from measurements.
-func finiteSums(s Sums) bool {
-	for _, x := range []float64{s.N, s.Mean, s.MeanLow, s.SS, s.SSLow, s.Total, s.Exposure} {
-		if math.IsNaN(x) || math.IsInf(x, 0) {
-			return false
-		}
-	}
-	return true
+	return Merge(m.family, s, m.sumOf((m.from+int64(len(m.full)))*chunk-m.first, end-m.first))
 }

@@ -48,11 +48,28 @@ func (a pair) over(b pair) pair {
 	return quickSum(q, q2).add(pair{hi: q3})
 }
 
+// overFloat is a / b for a float64, in fewer steps.
+func (a pair) overFloat(b float64) pair {
+	q := a.hi / b
+	rest := math.FMA(-q, b, a.hi) // exact
+	return quickSum(q, (rest+a.lo)/b)
+}
+
 // ln2 to 32 digits.
 var ln2 = pair{0.693147180559945286226764, 2.319046813846299558417771e-17}
 
-// logPair is the natural logarithm of a positive finite number to nearly the pair's digits,
-// by the series of artanh. Covered by TestLogPair.
+// artanh holds the coefficients 1/(2k+1) of its series, as far as logPair needs them.
+var artanh = func() (c [24]pair) {
+	for k := range c {
+		c[k] = pair{hi: 1}.overFloat(float64(2*k + 1))
+	}
+	return c
+}()
+
+// logPair is the natural logarithm of a positive finite number, within 1e-30 of itself or of 1e-30
+// where that is larger: x = m 2^e with m between sqrt(1/2) and sqrt(2), and log m =
+// 2 artanh((m-1)/(m+1)), whose 24th term is below 1e-36. It is not math.Log because that is
+// assembly on some machines, and bits must not depend on the machine. TestLogPair.
 func logPair(x float64) pair {
 	m, e := math.Frexp(x)
 	if m < math.Sqrt2/2 {
@@ -60,11 +77,11 @@ func logPair(x float64) pair {
 	}
 	s := twoSum(m, -1).over(twoSum(m, 1))
 	s2 := s.mul(s)
-	sum := pair{hi: 1}.over(pair{hi: 47})
-	for k := 45; k >= 1; k -= 2 {
-		sum = sum.mul(s2).add(pair{hi: 1}.over(pair{hi: float64(k)}))
+	series := artanh[len(artanh)-1]
+	for k := len(artanh) - 2; k >= 0; k-- {
+		series = series.mul(s2).add(artanh[k])
 	}
-	sum = sum.mul(s)
-	sum = sum.add(sum)
-	return ln2.mul(pair{hi: float64(e)}).add(sum)
+	series = series.mul(s)
+	series = series.add(series)
+	return ln2.mul(pair{hi: float64(e)}).add(series)
 }

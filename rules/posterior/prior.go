@@ -53,7 +53,8 @@ func (p Prior) checkNormal(f Family) error {
 //
 // with k0 = MeanWorth, nu0 = SDWorth, m0 = Mean, s0 = SD, and for the reference prior k0 = 0,
 // nu0 = -1, s0 = 0. For lognormal the prior's mean is the median in the unit of the data and
-// its sd the standard deviation of natural logarithms.
+// its sd the standard deviation of natural logarithms. The prior must have passed its Check.
+// TestNormalUpdate, TestCounts, TestShiftAndScale, TestLognormalIsNormalOnLogs.
 func (p Prior) Posterior(f Family, s Sums) Posterior {
 	switch f {
 	case BinomialFamily:
@@ -87,7 +88,9 @@ func (p Prior) Posterior(f Family, s Sums) Posterior {
 // ErrImproper is wrapped by what Proper returns.
 var ErrImproper = errors.New("too little is known yet")
 
-// Proper is nil where the posterior is a distribution that can be weighed.
+// Proper is nil where the posterior is a distribution that can be weighed; else a sentence that
+// wraps ErrImproper. Under the reference prior it takes more than one unit of a normal process (under
+// a discount, more than one effective unit), and some exposure of a poisson one. TestProper.
 func (p Posterior) Proper() error {
 	switch p.Family {
 	case NormalFamily, LognormalFamily:
