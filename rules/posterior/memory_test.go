@@ -83,7 +83,7 @@ func same(a, b Sums) bool {
 // Whatever the batches, and however often a memory is saved and loaded on the way, the same
 // observations give the same bits: those of one go. And what counts is the last N, or what the
 // window of time has not left behind.
-func TestBatchesAndRestartsDoNotShow(t *testing.T) {
+func TestMemoryReload(t *testing.T) {
 	rapid.Check(t, func(t *rapid.T) {
 		f := rapid.SampledFrom(families).Draw(t, "family")
 		r := rapid.SampledFrom([]Remember{{Segment: true}, {Units: 2}, {Units: 63}, {Units: 64}, {Units: 200}, {Hours: 0.5}, {Hours: 1}}).Draw(t, "remember")
