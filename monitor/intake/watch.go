@@ -194,9 +194,12 @@ func (w *watcher) run(ctx context.Context) {
 			w.scan(ctx)
 			continue
 		}
-		if c := w.settled(now); c != nil {
-			w.take(ctx, c)
-			continue
+		// Of a folder that can't be looked at nothing is sent before it is told that it can again.
+		if w.folder != nil {
+			if c := w.settled(now); c != nil {
+				w.take(ctx, c)
+				continue
+			}
 		}
 		w.wait(ctx)
 	}
@@ -205,7 +208,7 @@ func (w *watcher) run(ctx context.Context) {
 // wait ends with a hint, or when there is something to do.
 func (w *watcher) wait(ctx context.Context) {
 	until := w.nextScan
-	if len(w.queue) > 0 && w.queue[0].due.Before(until) {
+	if w.folder != nil && len(w.queue) > 0 && w.queue[0].due.Before(until) {
 		until = w.queue[0].due
 	}
 	timer := time.NewTimer(time.Until(until))
