@@ -12,8 +12,8 @@ import (
 // FileMemory is what intake must remember of one file.
 //
 // Its value in the bucket is 1 for this form (a byte), whether it was counted (0 or 1, a byte),
-// Size and Written (varints of encoding/binary), Index (uvarint) and SHA256 (32 bytes). A
-// reader refuses another form.
+// Size and Written (varints of encoding/binary), Index (uvarint), SHA256 (32 bytes), and what
+// remains is Progress. A reader refuses another form.
 type FileMemory struct {
 	Source  string
 	File    string
@@ -22,7 +22,11 @@ type FileMemory struct {
 	SHA256  [32]byte
 	Index   uint64 // of the record that dealt with it
 	Counted bool   // content that stood under this name is in a batch
-	Batch   bool   // this step takes the content as a batch; not remembered
+
+	// Progress is how far a growing file has been read, as intake writes it; nil of a whole file.
+	Progress []byte
+
+	Batch bool // this step takes the content as a batch; not remembered
 }
 
 const fileForm = 1
@@ -36,7 +40,7 @@ func writeFile(tx *bolt.Tx, f *FileMemory) error {
 	b = binary.AppendVarint(b, f.Written)
 	b = binary.AppendUvarint(b, f.Index)
 	key := joined(f.Source, []byte(f.File))
-	if err := tx.Bucket(filesBucket).Put(key, append(b, f.SHA256[:]...)); err != nil {
+	if err := tx.Bucket(filesBucket).Put(key, append(append(b, f.SHA256[:]...), f.Progress...)); err != nil {
 		return err
 	}
 	contents := tx.Bucket(contentsBucket)
@@ -52,11 +56,14 @@ func readFile(b []byte, source, file string) (f FileMemory, err error) {
 	form := c.byte()
 	f = FileMemory{Source: source, File: file, Counted: c.byte() == 1, Size: c.varint(), Written: c.varint(), Index: c.uvarint()}
 	copy(f.SHA256[:], c.take(uint64(len(f.SHA256))))
-	if c.err == nil && (form != fileForm || len(c.rest) > 0) {
+	if c.err == nil && form != fileForm {
 		c.fail("its form is not the %d that this program reads", fileForm)
 	}
 	if c.err != nil {
 		return f, fmt.Errorf("what is remembered of %q of %s: %w", file, source, c.err)
+	}
+	if len(c.rest) > 0 {
+		f.Progress = bytes.Clone(c.rest)
 	}
 	return f, nil
 }
