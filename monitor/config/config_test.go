@@ -101,6 +101,8 @@ func TestSaysWhatIsWrong(t *testing.T) {
 		{"", "[source.two]\nfolder = \"state/drop\"\ncolumns = { line = \"l\", head = \"h\" }", "", "outside the state folder"},
 		{"", "[source.two]\nfolder = \"d2\"\ntime_format = \"YYYY hh\"\ncolumns = { line = \"l\", head = \"h\" }", "", "has no MM"},
 		{"", "[source.two]\nfolder = \"d2\"\nlargest = \"3 XB\"\ncolumns = { line = \"l\", head = \"h\" }", "", `such as "64MB"`},
+		{"", "[source.two]\nfolder = \"d2\"\ndecimal = \",\"\ngrouping = \",\"\ncolumns = { line = \"l\", head = \"h\" }", "", "neither the decimal sign"},
+		{"", "[source.two]\nfolder = \"d2\"\nencoding = \"utf8\"\ncolumns = { line = \"l\", head = \"h\" }", "", `did you mean "utf-8"`},
 		{"", "[site]", "", "site"},
 	} {
 		_, err := parse(t, c.characteristic, c.source, c.rules)

@@ -54,6 +54,8 @@ type rawSource struct {
 	Largest    string         `toml:"largest"`
 	Delimiter  string         `toml:"delimiter"`
 	Decimal    string         `toml:"decimal"`
+	Grouping   string         `toml:"grouping"`
+	Encoding   string         `toml:"encoding"`
 	UnitsRow   bool           `toml:"units_row"`
 	Preamble   int            `toml:"preamble"`
 	NoValue    []string       `toml:"no_value"`

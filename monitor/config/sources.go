@@ -1,6 +1,7 @@
 package config
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"path/filepath"
@@ -57,6 +58,17 @@ func (c *checker) form(key string, r *rawSource, f *Form) {
 		f.Decimal = ','
 	default:
 		c.fault(key+".decimal", "", `"." or ","`, "read %q", r.Decimal)
+	}
+	switch {
+	case r.Grouping == "":
+	case len(r.Grouping) == 1 && strings.Contains(" .,'", r.Grouping) && r.Grouping[0] != f.Decimal && r.Grouping[0] != f.Delimiter:
+		f.Grouping = r.Grouping[0]
+	default:
+		c.fault(key+".grouping", "", `a blank, ".", "," or "'", and neither the decimal sign nor the delimiter`, "read %q", r.Grouping)
+	}
+	f.Encoding = cmp.Or(r.Encoding, "utf-8")
+	if encodings := []string{"utf-8", "utf-16", "windows-1252"}; !slices.Contains(encodings, f.Encoding) {
+		c.fault(key+".encoding", claim.Nearest(f.Encoding, encodings), strings.Join(encodings, ", "), "there is no encoding %q", r.Encoding)
 	}
 	if r.Preamble < 0 || r.Preamble > 10000 {
 		c.fault(key+".preamble", "", "a number of lines from 0 to 10000", "read %d", r.Preamble)
