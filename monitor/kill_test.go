@@ -201,8 +201,14 @@ func checkKilled(t *testing.T, d *daemon, files int) {
 		switch i % 10 {
 		case 3:
 			wants = [3]int{0, 1, 0}
+		case 4: // the next one has the same content: either may be seen first
+			if got[2] == 1 {
+				wants = [3]int{0, 0, 1}
+			}
 		case 5:
-			wants = [3]int{0, 0, 1}
+			if before := fmt.Sprintf("f%03d.csv", i-1); counted[before] == 1 {
+				wants = [3]int{0, 0, 1}
+			}
 		}
 		if got != wants {
 			t.Errorf("%s: counted, held and again %v times; want %v", name, got, wants)
