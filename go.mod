@@ -8,6 +8,7 @@ require (
 	github.com/pelletier/go-toml/v2 v2.4.3
 	github.com/rs/zerolog v1.35.1
 	go.etcd.io/bbolt v1.5.0
+	golang.org/x/mod v0.43.0
 	golang.org/x/sys v0.50.0
 )
 

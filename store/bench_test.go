@@ -46,14 +46,19 @@ func BenchmarkCommit(b *testing.B) {
 	s := open(b, b.TempDir())
 	defer s.Close()
 	for b.Loop() {
-		st := step(s, 0)
-		st.Entries[0] = batchWithLooks(s.Next(), 12, 10)
-		st.Files[0].SHA256 = [32]byte{byte(s.Next()), byte(s.Next() >> 8), byte(s.Next() >> 16)}
-		st.Pieces["process/head.L1"] = make([]byte, 1000)
-		if err := s.Commit(st); err != nil {
+		if err := s.Commit(typical(s)); err != nil {
 			b.Fatal(err)
 		}
 	}
+}
+
+// typical is the step of a batch of 12 rows with ten looks, a piece of state and a message.
+func typical(s *Store) Step {
+	st := step(s, 0)
+	st.Entries[0] = batchWithLooks(s.Next(), 12, 10)
+	st.Files[0].SHA256 = [32]byte{byte(s.Next()), byte(s.Next() >> 8), byte(s.Next() >> 16)}
+	st.Pieces["process/head.L1"] = make([]byte, 1000)
+	return st
 }
 
 // BenchmarkRecord is what a record takes to write and to read, and how many bytes a measured

@@ -70,6 +70,14 @@ func commitAll(folder string) int {
 			return 3
 		}
 		fmt.Println("done", s.Next())
+		if s.Next()%2 == 1 {
+			continue
+		}
+		if _, err := s.Checkpoint(); err != nil {
+			fmt.Println("failed:", err)
+			return 3
+		}
+		fmt.Println("signed", s.Next())
 	}
 	if err := s.Close(); err != nil {
 		fmt.Println("not closed:", err)
@@ -144,6 +152,9 @@ func wholeSteps(t *testing.T, s *Store) {
 	if err != nil || seen != next {
 		t.Errorf("%d records of %d, %v", seen, next, err)
 	}
+	if _, err := s.Verify(Verification{}); err != nil {
+		t.Error(err)
+	}
 	pieces, err := s.Pieces()
 	if err != nil {
 		t.Fatal(err)
@@ -189,8 +200,10 @@ func TestEveryCallFails(t *testing.T) {
 		{"pwrite64:error=EIO", 60, every},
 		{"pwrite64:error=ENOSPC", 60, every},
 		{"pwrite64:signal=KILL", 60, every},
+		{"renameat,rename,renameat2:signal=KILL", 6, 1},
+		{"fsync:signal=KILL", 8, 1},
 		{"ftruncate:error=ENOSPC", 2, 1},
-		{"fsync:error=EIO", 3, 1},
+		{"fsync:error=EIO", 8, 1}, // the key, the stamp and a checkpoint, each with its folder
 	} {
 		for when := 1; when <= f.most; when += f.every {
 			folder := filepath.Join(t.TempDir(), "state")

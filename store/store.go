@@ -5,15 +5,22 @@
 // Buckets, their keys and values. Numbers in keys are 8 bytes, big-endian, so that they sort;
 // strings in composite keys end with a zero byte, which no source, feed or file name holds.
 //
-//	meta     "format"                 → "2": the version of this layout; another is refused
-//	         "origin"                 → a random UUID, made with the store
+//	meta     "format"                 → "3": the version of this layout; another is refused
+//	         "origin"                 → a random UUID, made with the store or its new origin
+//	         "signed"                 → size of the last checkpoint that Commit knew of
+//	origins  number, from 0           → Origin as JSON
 //	journal  index                    → a record (record.go)
+//	tree     index                    → the hashes of the subtrees that the record completes, the
+//	                                    leaf first, 32 bytes each (package ledger)
 //	times    at (ns since 1970), index → nothing: the first record at or after a moment
 //	alarms   alarm number, index      → nothing: the records that changed an alarm
 //	state    name of a piece          → the piece, as the engine encoded it
 //	files    source 0 file            → FileMemory (files.go)
 //	contents SHA-256                  → index of the batch that took it, source 0 file
 //	outbox   feed 0 number            → Message as JSON
+//
+// Beside the store lie the stamp (stamp.go) and, named by the origin, the key that checkpoints
+// are signed with and the last of them (sealing.go).
 //
 // A store belongs to one process at a time, and to one account: its folder and file are not
 // readable by others. After the first storage error a Store does nothing more but give that
@@ -38,6 +45,7 @@ import (
 	bolterrors "go.etcd.io/bbolt/errors"
 
 	"steelyard/rules"
+	"steelyard/store/ledger"
 )
 
 // ErrHeld is wrapped by Open where another process has the store.
@@ -49,7 +57,7 @@ var ErrStorage = errors.New("storage failed")
 
 const (
 	fileName = "steelyard.db"
-	format   = "2"
+	format   = "3"
 )
 
 var (
@@ -61,10 +69,13 @@ var (
 	filesBucket    = []byte("files")
 	contentsBucket = []byte("contents")
 	outboxBucket   = []byte("outbox")
+	treeBucket     = []byte("tree")
+	originsBucket  = []byte("origins")
 
-	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket}
+	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
+		treeBucket, originsBucket}
 
-	formatKey, originKey = []byte("format"), []byte("origin")
+	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
 
 // Store is an open store. Commit must be called by one goroutine at a time; everything else
@@ -75,6 +86,8 @@ type Store struct {
 	origin    string
 	before    stamp // as it was found
 	recovered string
+	sealing   sealing
+	bare      bool // without the tree: only a benchmark does so
 
 	mu     sync.Mutex // guards what follows, for as long as it takes to read, set or stamp it
 	stamp  stamp
@@ -85,10 +98,14 @@ type Store struct {
 // Options are how a store is opened; the zero value serves.
 type Options struct {
 	Wait time.Duration // for another process to let go of it; 1 s where 0
+
+	// NewOrigin has the store go on under a new origin and key: the way on where Open refuses
+	// with ErrNotAsSigned, or the key is lost.
+	NewOrigin *NewOrigin
 }
 
 // Open opens the store in a folder, which it makes where there is none. The error wraps
-// ErrHeld or ErrStorage, or says in a sentence what else is wrong.
+// ErrHeld, ErrStorage or ErrNotAsSigned, or says in a sentence what else is wrong.
 func Open(folder string, o Options) (*Store, error) {
 	if o.Wait == 0 {
 		o.Wait = time.Second
@@ -135,6 +152,9 @@ func (s *Store) open(o Options) (err error) {
 	}
 	if found != format {
 		return fmt.Errorf("the store in %s has format %q and this program reads %q; use the program that wrote it", s.folder, found, format)
+	}
+	if err = s.openSealing(o.NewOrigin); err != nil {
+		return err
 	}
 	return s.stampOpen()
 }
@@ -228,7 +248,7 @@ func (s *Store) Close() error {
 	return err
 }
 
-// Origin is a random UUID made with the store.
+// Origin is a random UUID made with the store, or with its new origin.
 func (s *Store) Origin() string { return s.origin }
 
 // Recovered says what was done because the store had not been closed in order; empty where
@@ -293,7 +313,7 @@ func (s *Store) Commit(step Step) error {
 		}
 	}
 	err := s.guard("commit", func() error {
-		return s.db.Update(func(tx *bolt.Tx) error { return write(tx, &step) })
+		return s.db.Update(func(tx *bolt.Tx) error { return s.write(tx, &step) })
 	})
 	if err != nil {
 		return err
@@ -304,11 +324,14 @@ func (s *Store) Commit(step Step) error {
 	return nil
 }
 
-func write(tx *bolt.Tx, step *Step) error {
+func (s *Store) write(tx *bolt.Tx, step *Step) error {
 	for i := range step.Entries {
-		if err := writeEntry(tx, &step.Entries[i]); err != nil {
+		if err := s.writeEntry(tx, &step.Entries[i]); err != nil {
 			return err
 		}
+	}
+	if err := s.noteSigned(tx); err != nil {
+		return err
 	}
 	state := tx.Bucket(stateBucket)
 	for name, piece := range step.Pieces {
@@ -333,7 +356,7 @@ func write(tx *bolt.Tx, step *Step) error {
 	return nil
 }
 
-func writeEntry(tx *bolt.Tx, e *Entry) error {
+func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 	record, err := encode(e)
 	if err != nil {
 		return err
@@ -341,6 +364,15 @@ func writeEntry(tx *bolt.Tx, e *Entry) error {
 	index := number(e.Event.Index)
 	if err := tx.Bucket(journalBucket).Put(index, record); err != nil {
 		return err
+	}
+	if !s.bare {
+		hashes, err := ledger.Grow(e.Event.Index, record, kept(tx))
+		if err == nil {
+			err = tx.Bucket(treeBucket).Put(index, hashes)
+		}
+		if err != nil {
+			return err
+		}
 	}
 	if err := tx.Bucket(timesBucket).Put(append(number(uint64(e.Event.At.UnixNano())), index...), nil); err != nil {
 		return err
