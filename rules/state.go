@@ -229,14 +229,18 @@ func (s *Series) of(i int) float64 {
 // take adds a series to what its process remembers.
 func (s *State) take(e *Event, series *Series) {
 	p := s.processes[series.Process]
-	times := make([]int64, len(series.Value))
+	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
+	// measurement is no later than its arrival.
+	now := e.At.UnixNano()
+	times, within := make([]int64, len(series.Value)), make([]int64, len(series.Value))
 	for i, row := range series.Row {
-		times[i] = e.At.UnixNano()
+		times[i] = now
 		if e.Batch.Rows.Time != nil {
 			times[i] = e.Batch.Rows.Time[row]
 		}
+		within[i] = min(times[i], now)
 	}
-	p.memory.AddBatch(series.Value, series.Of, times)
+	p.memory.AddBatch(series.Value, series.Of, within)
 	p.Taken += int64(len(series.Value))
 	p.LastTaken = e.At
 	if len(times) > 0 {
@@ -393,6 +397,7 @@ func (s *State) step(e *Event, rule string, to AlarmState, c Change, out *Outcom
 func (s *State) look(e *Event, i int, out *Outcomes) {
 	r := &s.ready[i]
 	a := s.alarms[r.Name]
+	s.age(e, r.claim)
 	look := s.weigh(i)
 	a.Last, a.LastAt, a.LookedAt = &look, e.At, e.Index
 	s.touched[rulePiece+r.Name] = true
@@ -410,6 +415,16 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 			to = Returned
 		}
 		s.step(e, r.Name, to, s.figures(i, look, Cleared), out)
+	}
+}
+
+// age lets what has left a window of time go from the processes of a claim, so that a look rests
+// on the window as it is at the event, also for a line that is idle.
+func (s *State) age(e *Event, c *claim.Claim) {
+	for _, name := range c.Processes {
+		if s.processes[name].memory.Pass(e.At.UnixNano()) {
+			s.touched[processPiece+name] = true
+		}
 	}
 }
 

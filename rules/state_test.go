@@ -197,6 +197,36 @@ func TestRestore(t *testing.T) {
 	})
 }
 
+// In a window of time, what is idle ages with the events of others, and a rig's clock that runs
+// ahead pushes nothing out.
+func TestWindowOfTime(t *testing.T) {
+	d := &driver{t: t, s: NewState()}
+	plan := testPlan()
+	plan.Characteristics[0].Remember = posterior.Remember{Hours: 1}
+	at := time.Date(2026, 3, 2, 10, 0, 0, 0, time.UTC)
+	apply := func(e Event, in time.Duration) {
+		at = at.Add(in)
+		e.At = at
+		if _, err := d.s.Apply(&e); err != nil {
+			t.Fatal(err)
+		}
+	}
+	apply(Event{Adopted: &Adopted{Plan: plan}}, 0)
+	apply(batch("head.L1", spread(33, 5)...), 0)
+	ahead := batch("head.L1", spread(33, 5)...)
+	for range 5 {
+		ahead.Batch.Rows.Time = append(ahead.Batch.Rows.Time, at.AddDate(10, 0, 0).UnixNano())
+	}
+	apply(ahead, time.Minute)
+	if s, _ := d.s.Sums("head.L1"); s.N != 10 {
+		t.Errorf("a clock that runs ahead: %v units are left of 10", s.N)
+	}
+	apply(batch("head.L4", spread(33, 5)...), 2*time.Hour)
+	if s, _ := d.s.Sums("head.L1"); s.N != 0 {
+		t.Errorf("two hours later %v units of an idle line still count in a window of one", s.N)
+	}
+}
+
 func TestWords(t *testing.T) {
 	plan := testPlan()
 	for text, want := range map[string]string{
