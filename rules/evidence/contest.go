@@ -154,7 +154,7 @@ func (c *contest) logTails(j int, at place) (below, above float64) {
 // logWinner is the logarithm of f_w(x) prod_j F_j(z) dx/du.
 func (c *contest) logWinner(u float64) float64 {
 	x, q, z, w, rate := c.span.at(u)
-	s := c.laws[c.which].logDensity(x*c.rates[c.which], q) + math.Log(rate)
+	s := c.laws[c.which].logDensity(x*c.rates[c.which], q) + log(rate)
 	for j := range c.n {
 		if j != c.which {
 			s += c.logTail(j, z, w)
@@ -170,7 +170,7 @@ func (c *contest) logTail(j int, x, q float64) float64 {
 // logChallengers is the logarithm of F_w(x) sum_j f_j(z) prod F_i(z) dz/du; the span's x is z here.
 func (c *contest) logChallengers(u float64) float64 {
 	z, q, x, w, rate := c.span.at(u)
-	product := c.logTail(c.which, x, w) + math.Log(rate)
+	product := c.logTail(c.which, x, w) + log(rate)
 	sum := math.Inf(-1)
 	for j := range c.n {
 		if j == c.which {

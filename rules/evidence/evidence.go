@@ -26,10 +26,10 @@ type Odds struct {
 }
 
 // Probability is P(claim).
-func (o Odds) Probability() float64 { return math.Exp(o.LogFor) }
+func (o Odds) Probability() float64 { return exp(o.LogFor) }
 
 // Contrary is P(not claim).
-func (o Odds) Contrary() float64 { return math.Exp(o.LogAgainst) }
+func (o Odds) Contrary() float64 { return exp(o.LogAgainst) }
 
 // Log10 is the decimal logarithm of the odds for the claim.
 func (o Odds) Log10() float64 { return (o.LogFor - o.LogAgainst) / math.Ln10 }

@@ -62,7 +62,7 @@ func (g *integrand) logAt(u float64) float64 {
 	if f == 1 {
 		return l
 	}
-	return l + math.Log(f)
+	return l + log(f)
 }
 
 // logIntegral is the logarithm of the integral over the real line, by the trapezoidal rule: for a
@@ -100,7 +100,7 @@ func (g *integrand) logIntegral(start, width float64) float64 {
 			break
 		}
 	}
-	return math.Log(h*sum) + top
+	return log(h*sum) + top
 }
 
 const (
@@ -135,12 +135,12 @@ type mapping struct{ at, top, left, right float64 }
 func (g *integrand) term(m *mapping, t float64) float64 {
 	u, rate := t, 1.0
 	if m.left != 0 {
-		e := math.Exp(-t)
+		e := exp(-t)
 		u += 1 - e
 		rate += e
 	}
 	if m.right != 0 {
-		e := math.Exp(t)
+		e := exp(t)
 		u += e - 1
 		rate += e
 	}
@@ -148,7 +148,7 @@ func (g *integrand) term(m *mapping, t float64) float64 {
 	if l -= m.top; l < -800 {
 		return 0
 	}
-	return rate * f * math.Exp(l)
+	return rate * f * exp(l)
 }
 
 // sweep sums the terms at k h, outwards on both sides until they are negligible.

@@ -18,7 +18,7 @@ func Estimate(c *claim.Claim, p []Process) (Interval, error) {
 		return Interval{}, err
 	}
 	if m, ok := symmetric(c, p); ok {
-		upper := quantile(c, p, logit975, m.centre, math.Hypot(m.one.scale, m.two.scale))
+		upper := quantile(c, p, logit975, m.centre, m.width())
 		return Interval{Median: m.centre, Lower: m.centre - m.beyond(upper), Upper: upper}, nil
 	}
 	start, scale := guess(c, p)
@@ -28,14 +28,14 @@ func Estimate(c *claim.Claim, p []Process) (Interval, error) {
 
 // symmetric gives the law of a quantity that is symmetric about its centre: its median is the
 // centre, and its interval reaches as far down as up.
-func symmetric(c *claim.Claim, p []Process) (m meansAt, ok bool) {
+func symmetric(c *claim.Claim, p []Process) (m contrast, ok bool) {
 	if c.Form != claim.Linear {
 		return m, false
 	}
 	one := &p[c.Terms[0].Process]
 	switch {
 	case c.Kind == claim.Mean || c.Kind == claim.Bias:
-		return combination(c, p), true
+		return contrastOf(c, p), true
 	case c.Kind == claim.Next && one.Family == posterior.NormalFamily:
 		return next(one), true
 	}
@@ -50,12 +50,12 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 	case claim.Mean, claim.Bias:
 		return 0, one.M/1e3 + meanOf(one).scale
 	case claim.Next:
-		return math.Exp(one.M), math.Exp(one.M)
+		return exp(one.M), exp(one.M)
 	case claim.Median:
 		if c.Form == claim.Ratio {
 			return 1, 0.1
 		}
-		return math.Exp(one.M), math.Exp(one.M) * meanOf(one).scale
+		return exp(one.M), exp(one.M) * meanOf(one).scale
 	case claim.SD:
 		if c.Form == claim.Ratio {
 			return 1, 0.1

@@ -27,7 +27,7 @@ import "math"
 type law struct {
 	a, b, n  float64
 	gamma    bool
-	logScale float64 // log of f's factor before math.Exp(-D)
+	logScale float64 // log of f's factor before exp(-D)
 	reach    float64 // |w| up to which the power series serves; 0 for none
 	first    float64 // the factor of Mills' ratio
 	rest     [lawTerms]float64
@@ -41,7 +41,7 @@ const (
 
 func betaLaw(a, b float64) law {
 	l := law{a: a, b: b, n: a + b}
-	l.logScale = stirling(l.n) - stirling(a) - stirling(b) - logRoot2Pi + float64(0.5*math.Log(a/l.n*b))
+	l.logScale = stirling(l.n) - stirling(a) - stirling(b) - logRoot2Pi + float64(0.5*log(a/l.n*b))
 	if a >= smoothFrom && b >= smoothFrom {
 		l.expand(a/l.n*b, (b-a)/l.n, 1/l.n)
 		l.reach = 0.7 * math.Sqrt(a/l.n*b)
@@ -51,7 +51,7 @@ func betaLaw(a, b float64) law {
 
 func gammaLaw(a float64) law {
 	l := law{a: a, b: math.Inf(1), n: math.Inf(1), gamma: true}
-	l.logScale = -stirling(a) - logRoot2Pi + float64(0.5*math.Log(a))
+	l.logScale = -stirling(a) - logRoot2Pi + float64(0.5*log(a))
 	if a >= smoothFrom {
 		l.expand(a, 1, 0)
 		l.reach = 0.7 * math.Sqrt(a)
@@ -128,7 +128,7 @@ func (l *law) logTailsLow(x, q, low float64) (below, above float64) {
 // logTailsFrom is logTails at x, 1-x with the excess known better than these give it.
 func (l *law) logTailsFrom(x, q, lambda float64) (below, above float64) {
 	f, ratio, isBelow := l.tail(x, q, lambda, l.deviance(x, q, lambda))
-	small := math.Min(f+math.Log(ratio), 0)
+	small := math.Min(f+log(ratio), 0)
 	if isBelow {
 		return small, log1mexp(small)
 	}
@@ -138,7 +138,7 @@ func (l *law) logTailsFrom(x, q, lambda float64) (below, above float64) {
 // logTail is log P(X > x) (above) or log P(X < x).
 func (l *law) logTail(x, q float64, above bool) float64 {
 	t, f := l.tailAt(x, q, above)
-	return t + math.Log(f)
+	return t + log(f)
 }
 
 // tailAt is P(X > x) (above) or P(X < x) as factor e^logarithm.
@@ -146,7 +146,7 @@ func (l *law) tailAt(x, q float64, above bool) (logarithm, factor float64) {
 	lambda := l.excess(x, q, 0)
 	f, ratio, isBelow := l.tail(x, q, lambda, l.deviance(x, q, lambda))
 	if isBelow == above {
-		return 0, math.Max(1-float64(ratio*math.Exp(f)), 0)
+		return 0, math.Max(1-float64(ratio*exp(f)), 0)
 	}
 	return f, ratio
 }
@@ -289,27 +289,27 @@ func (l *law) logHighOfSmall(x, q, top float64) float64 {
 		v = q
 	}
 	sum := 0.0
-	span := math.Log(top / v)
+	span := log(top / v)
 	panels := math.Ceil(span)
 	for i := 0.0; i < panels; i++ {
 		for k, node := range legendreNodes {
 			for _, t := range [2]float64{0.5 * (1 - node), 0.5 * (1 + node)} {
-				sum += float64(legendreWeights[k] * l.densityInLog(v*math.Exp(span*(i+t)/panels), mirrored))
+				sum += float64(legendreWeights[k] * l.densityInLog(v*exp(span*(i+t)/panels), mirrored))
 			}
 		}
 	}
-	return math.Log(float64(0.5*span/panels*sum) + math.Exp(l.logBeyond(top, mirrored)))
+	return log(float64(0.5*span/panels*sum) + exp(l.logBeyond(top, mirrored)))
 }
 
 // densityInLog is the density of log V, V = X or 1-X.
 func (l *law) densityInLog(v float64, mirrored bool) float64 {
 	switch {
 	case l.gamma:
-		return math.Exp(l.logDensity(v, 0))
+		return exp(l.logDensity(v, 0))
 	case mirrored:
-		return math.Exp(l.logDensity(1-v, v)) / (1 - v)
+		return exp(l.logDensity(1-v, v)) / (1 - v)
 	}
-	return math.Exp(l.logDensity(v, 1-v)) / (1 - v)
+	return exp(l.logDensity(v, 1-v)) / (1 - v)
 }
 
 // logBeyond is the high tail of V beyond v by the continued fraction.
@@ -321,9 +321,9 @@ func (l *law) logBeyond(v float64, mirrored bool) float64 {
 	lambda := l.excess(x, q, 0)
 	d := l.deviance(x, q, lambda)
 	if mirrored {
-		return l.logScale - d + math.Log(l.fractionBelow(x, q, lambda))
+		return l.logScale - d + log(l.fractionBelow(x, q, lambda))
 	}
-	return l.logScale - d + math.Log(l.fractionAbove(x, q, lambda))
+	return l.logScale - d + log(l.fractionAbove(x, q, lambda))
 }
 
 // windowOdds is the odds of lo < X < hi, top being the end of the support: by the tails where they leave
@@ -354,13 +354,13 @@ func (l *law) windowOdds(lo, hi, top float64) Odds {
 
 // logBetween is log P(lo < X < hi) by panels of Gauss and Legendre in logit X (log X), for 0 < lo < hi < top.
 func (l *law) logBetween(lo, hi float64) float64 {
-	width, odds := math.Log1p((hi-lo)/lo), lo
+	width, odds := log1p((hi-lo)/lo), lo
 	if !l.gamma {
-		width, odds = math.Log1p((hi-lo)/lo/(1-hi)), lo/(1-lo)
+		width, odds = log1p((hi-lo)/lo/(1-hi)), lo/(1-lo)
 	}
 	panels := math.Ceil(width / math.Min(1, math.Sqrt(1/l.a+1/l.b)))
 	f := func(y float64) float64 {
-		o := float64(odds * math.Exp(y))
+		o := float64(odds * exp(y))
 		if l.gamma {
 			return l.logDensity(o, 0)
 		}
@@ -371,9 +371,9 @@ func (l *law) logBetween(lo, hi float64) float64 {
 	for i := 0.0; i < panels; i++ {
 		for k, node := range legendreNodes {
 			for _, t := range [2]float64{0.5 * (1 - node), 0.5 * (1 + node)} {
-				sum += float64(legendreWeights[k] * math.Exp(f(width*(i+t)/panels)-top))
+				sum += float64(legendreWeights[k] * exp(f(width*(i+t)/panels)-top))
 			}
 		}
 	}
-	return math.Log(0.5*width/panels*sum) + top
+	return log(0.5*width/panels*sum) + top
 }

@@ -1,6 +1,7 @@
 package evidence
 
 import (
+	"fmt"
 	"math/rand/v2"
 	"testing"
 
@@ -23,4 +24,29 @@ func BenchmarkMeanDifferenceByDraws(b *testing.B) {
 		}
 	}
 	b.ReportMetric(float64(above)/float64(b.N)/100000, "P")
+}
+
+// contrastFor is the contrast of one of n means with the average of the others.
+func contrastFor(n int) (k contrast) {
+	for i := range n {
+		weight := 1.0
+		if i > 0 {
+			weight = -1 / float64(n-1)
+		}
+		p := group{float64(8 + 3*i), 33.9 - 0.05*float64(i), 0.5 + 0.03*float64(i)}.process()
+		k.add(meanOf(&p), weight)
+	}
+	return k
+}
+
+func BenchmarkContrast(b *testing.B) {
+	for _, n := range []int{2, 3, 4, 5, 10, 12} {
+		k := contrastFor(n)
+		b.Run(fmt.Sprint(n), func(b *testing.B) {
+			b.ReportAllocs()
+			for b.Loop() {
+				k.above(1.2)
+			}
+		})
+	}
 }

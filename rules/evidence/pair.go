@@ -21,12 +21,12 @@ type span struct {
 // and du/dx inverted over what turns a density of logit x (log x) into one of x.
 func (s *span) at(u float64) (x, q, z, w, rate float64) {
 	if math.IsInf(s.width, 1) {
-		p := math.Exp(u)
+		p := exp(u)
 		x = s.x0 + p
 		return x, 0, s.z0 + float64(s.slope*p), 0, p / x
 	}
 	// The distances from lo and hi.
-	e := math.Exp(-math.Abs(u))
+	e := exp(-math.Abs(u))
 	far := s.width / (1 + e)
 	near := far * e
 	p, r := far, near
@@ -50,14 +50,14 @@ func (s *span) at(u float64) (x, q, z, w, rate float64) {
 func (s *span) coordinate(at place) float64 {
 	p := at.x - s.lo
 	if math.IsInf(s.width, 1) {
-		return math.Log(math.Max(p, float64(1e-3*at.x)+1e-300))
+		return log(math.Max(p, float64(1e-3*at.x)+1e-300))
 	}
 	if s.beta && s.lo > 0.5 {
 		p = s.loQ - at.q
 	}
 	t := p / s.width
 	if t > 0 && t < 0.5 {
-		return math.Log(t)
+		return log(t)
 	}
 	if t >= 0.5 && t < 1 {
 		r := s.width - p
@@ -65,7 +65,7 @@ func (s *span) coordinate(at place) float64 {
 			r = at.q - s.q1
 		}
 		if r > 0 {
-			return -math.Log(r / s.width)
+			return -log(r / s.width)
 		}
 	}
 	return math.Copysign(14, t-0.5)
@@ -207,10 +207,10 @@ func (p *pair) rates(g *integrand, above bool) {
 		width = 1
 	}
 	if left > 0 {
-		g.leftBend = math.Log(left / width)
+		g.leftBend = log(left / width)
 	}
 	if right > 0 {
-		g.rightBend = -math.Log(right / width)
+		g.rightBend = -log(right / width)
 	}
 }
 

@@ -17,9 +17,9 @@ func (o Odds) against() Odds { return Odds{LogFor: o.LogAgainst, LogAgainst: o.L
 // It keeps relative accuracy as long as e^l is not nearly 1.
 func log1mexp(l float64) float64 {
 	if l > -math.Ln2 {
-		return math.Log(-math.Expm1(l))
+		return log(-expm1(l))
 	}
-	return math.Log1p(-math.Exp(l))
+	return log1p(-exp(l))
 }
 
 // oddsOf completes a pair from the logarithm of the claim's probability.
@@ -36,7 +36,7 @@ func logSum(a, b float64) float64 {
 	if math.IsInf(b, -1) {
 		return a
 	}
-	return a + math.Log1p(math.Exp(b-a))
+	return a + log1p(exp(b-a))
 }
 
 // polynomial is c[0] + c[1] x + ..., the even and the odd terms by Horner's rule side by side, so that one
@@ -65,7 +65,7 @@ func deviance(ratio, t float64) float64 {
 		if t > math.MaxFloat64 {
 			return t
 		}
-		return t - math.Log(ratio)
+		return t - log(ratio)
 	}
 	u := t / (2 + t)
 	v := float64(u * u)
@@ -95,7 +95,7 @@ func stirling(a float64) float64 {
 	}
 	d := top - a
 	// (top-1/2) log top - (a-1/2) log a - log product - d, with the logarithms of like size joined.
-	return stirling(top) + float64((top-0.5)*math.Log(top)) - float64((a-0.5)*math.Log(a)) - math.Log(product) - d
+	return stirling(top) + float64((top-0.5)*log(top)) - float64((a-0.5)*log(a)) - log(product) - d
 }
 
 var stirlingSeries = [...]float64{1. / 12, -1. / 360, 1. / 1260, -1. / 1680, 1. / 1188, -691. / 360360, 1. / 156,
@@ -146,7 +146,7 @@ var millsFit = [...]float64{
 // normalDensity is phi(z).
 func normalDensity(z float64) float64 {
 	const invRoot2Pi = 0.398942280401432677939946059934381868
-	return float64(invRoot2Pi * math.Exp(-normalExponent(z)))
+	return float64(invRoot2Pi * exp(-normalExponent(z)))
 }
 
 // normalExponent is z^2/2.
@@ -173,7 +173,7 @@ func normalTails(a, b float64) (logarithm, factor float64) {
 	}
 	factor = mills(a)
 	if rest := 0.5 * (b - a) * (b + a); rest < 45 {
-		factor += float64(mills(b) * math.Exp(-rest))
+		factor += float64(mills(b) * exp(-rest))
 	}
 	return -normalExponent(a) - logRoot2Pi, factor
 }
@@ -181,7 +181,7 @@ func normalTails(a, b float64) (logarithm, factor float64) {
 // logNormalWindow is log P(lo < Z < hi).
 func logNormalWindow(lo, hi float64) float64 {
 	l, f := normalWindow(lo, hi)
-	return l + math.Log(f)
+	return l + log(f)
 }
 
 // normalWindow is P(lo < Z < hi) of a standard normal Z as factor e^logarithm, with relative accuracy also
@@ -203,7 +203,7 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 	case lo > 0 && d*(lo+float64(0.5*d)) > 1:
 		f := mills(lo)
 		if fall := d * (lo + float64(0.5*d)); fall < 45 {
-			f -= float64(math.Exp(-fall) * mills(hi))
+			f -= float64(exp(-fall) * mills(hi))
 		}
 		return -normalExponent(lo) - logRoot2Pi, f
 	case lo <= 0 && hi > 0.5:
@@ -214,7 +214,7 @@ func normalWindow(lo, hi float64) (logarithm, factor float64) {
 	s := 0.0
 	for i, x := range legendreNodes {
 		r, l := half*(1+x), half*(1-x)
-		s = math.FMA(legendreWeights[i], float64(math.Exp(-r*(lo+float64(0.5*r))))+float64(math.Exp(-l*(lo+float64(0.5*l)))), s)
+		s = math.FMA(legendreWeights[i], float64(exp(-r*(lo+float64(0.5*r))))+float64(exp(-l*(lo+float64(0.5*l)))), s)
 	}
 	return -normalExponent(lo) - logRoot2Pi, half * s
 }
@@ -229,12 +229,12 @@ func normalQuantile(p, q float64) float64 {
 	if p > 0.3 {
 		return normalCentre(0.5 - p)
 	}
-	l := math.Log(p)
+	l := log(p)
 	t := float64(-2*l) - 1.8379
-	z := math.Sqrt(math.Max(0.1, t-math.Log(math.Max(1, t))))
+	z := math.Sqrt(math.Max(0.1, t-log(math.Max(1, t))))
 	for range 20 {
 		m := mills(z)
-		step := float64((math.Log(m) - normalExponent(z) - logRoot2Pi - l) * m)
+		step := float64((log(m) - normalExponent(z) - logRoot2Pi - l) * m)
 		z += step
 		if math.Abs(step) < 1e-9*z {
 			// The last step was below 1e-9; the next one would be below its square.

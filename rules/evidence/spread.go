@@ -54,7 +54,7 @@ type spreadCurve struct {
 	// The edge.
 	fraction    float64 // 0 for capability
 	logFraction float64
-	logInside   float64 // math.Log(1-f)
+	logInside   float64 // log(1-f)
 	v           float64 // 3c; z_f
 	hazard      float64 // phi(z_f)/Q(z_f)
 	s0          float64 // s where rho = 0: 3c or z_{f/2}; 0 where s starts at 0 (one limit, c <= 0)
@@ -123,7 +123,7 @@ func (s *spreadCurve) two() bool { return !math.IsInf(s.upper, 1) && !math.IsInf
 
 // edge is s, v and 2 dlog s/du at the coordinate u: log rho, or log s where s starts at 0.
 func (c *spreadCurve) edge(u float64) (s, v, rate float64) {
-	e := math.Exp(u)
+	e := exp(u)
 	if c.s0 == 0 {
 		return e, c.v, 2
 	}
@@ -141,18 +141,18 @@ func (c *spreadCurve) solve(rho float64) (s, rate float64) {
 		return c.solveInside(rho)
 	}
 	v := c.v
-	r := math.Exp(-2 * rho * (v + rho))
+	r := exp(-2 * rho * (v + rho))
 	if r < 1e-9 {
 		// Q(v+2rho) is r times Q(v) and less: one step of Newton's is exact to r^2.
 		v += float64(r * mills(v+float64(2*rho)))
 		return v + rho, 1 - 2*r
 	}
-	v = math.Min(v+math.Log1p(r)/c.hazard, c.s0)
+	v = math.Min(v+log1p(r)/c.hazard, c.s0)
 	for range 30 {
 		// Halley's step: d is Newton's, bend is g''/g' of g = log(Q(v)+Q(v+2rho)).
-		r = math.Exp(-2 * rho * (v + rho))
+		r = exp(-2 * rho * (v + rho))
 		m := mills(v) + float64(r*mills(v+2*rho))
-		d := (math.Log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
+		d := (log(m) - normalExponent(v) - logRoot2Pi - c.logFraction) * m / (1 + r)
 		bend := (1+r)/m - (v+float64(r*(v+2*rho)))/(1+r)
 		step := d / (1 + float64(0.5*float64(d*bend)))
 		v += step
@@ -161,22 +161,22 @@ func (c *spreadCurve) solve(rho float64) (s, rate float64) {
 		}
 	}
 	s = v + rho
-	r = math.Exp(-2 * rho * s)
-	return s, -math.Expm1(-2*rho*s) / (1 + r)
+	r = exp(-2 * rho * s)
+	return s, -expm1(-2*rho*s) / (1 + r)
 }
 
 func (c *spreadCurve) solveInside(rho float64) (s, rate float64) {
 	s = math.Max(c.s0, rho+c.v)
 	for range 60 {
 		w := logNormalWindow(rho-s, rho+s)
-		step := (c.logInside - w) * math.Exp(w) / (normalDensity(rho-s) + normalDensity(rho+s))
+		step := (c.logInside - w) * exp(w) / (normalDensity(rho-s) + normalDensity(rho+s))
 		s = math.Max(s+step, 0.5*s)
 		if math.Abs(step) <= 1e-9*s {
 			break
 		}
 	}
-	r := math.Exp(-2 * rho * s)
-	return s, -math.Expm1(-2*rho*s) / (1 + r)
+	r := exp(-2 * rho * s)
+	return s, -expm1(-2*rho*s) / (1 + r)
 }
 
 // at is the integrand as factor e^logarithm: the density of s times the probability that the mean is inside the
@@ -209,18 +209,18 @@ func (c *spreadCurve) logProbability(kind integrandKind) float64 {
 	width := math.Min(1, math.Sqrt(0.5/c.law.a))
 	s := math.Sqrt(c.law.a / c.kappa)
 	if c.s0 == 0 {
-		return g.logIntegral(math.Log(s), width)
+		return g.logIntegral(log(s), width)
 	}
 	rho := math.Max(s-c.v, 0.5*math.Min(1, 1/c.rootK))
 	width = math.Min(1, width*s/rho)
 	if kind == beyond && c.v < 0 && c.fraction > 0 && math.Min(c.upper, c.lower) < 0 {
 		// With the mean beyond a limit more than half is outside both where sigma is small and where it is large: two
 		// peaks. The sum has to pass the second, which lies beyond s = v/d.
-		g.through, _, _ = g.peak(math.Log(math.Max(s, 1.5*c.v/math.Min(c.upper, c.lower))-c.v), width)
+		g.through, _, _ = g.peak(log(math.Max(s, 1.5*c.v/math.Min(c.upper, c.lower))-c.v), width)
 		g.twoPeaks = true
 		rho = 0.1 * c.s0
 	}
-	return logSum(outer, g.logIntegral(math.Log(rho), width))
+	return logSum(outer, g.logIntegral(log(rho), width))
 }
 
 // leftRate is how fast the integrand falls off as u goes to -infinity: d log s/du as rho (once more where
@@ -268,7 +268,7 @@ func outsideOdds(p *Process, fraction float64) Odds {
 	if o, ok := c.degenerate(p); ok {
 		return o
 	}
-	c.fraction, c.logFraction, c.logInside = fraction, math.Log(fraction), math.Log1p(-fraction)
+	c.fraction, c.logFraction, c.logInside = fraction, log(fraction), log1p(-fraction)
 	c.v = normalQuantile(fraction, 1-fraction)
 	c.hazard = normalDensity(c.v) / fraction
 	s := math.Sqrt(c.law.a / c.kappa)

@@ -94,16 +94,6 @@ func between(lo, hi Odds) Odds {
 	return Odds{LogFor: inside, LogAgainst: contrary}
 }
 
-// combination makes the standardised combination of a linear claim about means.
-func combination(c *claim.Claim, p []Process) meansAt {
-	one := meanOf(&p[c.Terms[0].Process])
-	if len(c.Terms) == 1 {
-		return combine(one, c.Terms[0].Weight, nil, 0)
-	}
-	two := meanOf(&p[c.Terms[1].Process])
-	return combine(one, c.Terms[0].Weight, &two, c.Terms[1].Weight)
-}
-
 func linearAbove(c *claim.Claim, p []Process, x float64) Odds {
 	one, w := &p[c.Terms[0].Process], c.Terms[0].Weight
 	if len(c.Terms) == 2 && (c.Kind == claim.Proportion || c.Kind == claim.Rate) {
@@ -121,21 +111,21 @@ func linearAbove(c *claim.Claim, p []Process, x float64) Odds {
 	}
 	switch c.Kind {
 	case claim.Mean, claim.Bias:
-		m := combination(c, p)
+		m := contrastOf(c, p)
 		return m.above(x)
 	case claim.Median:
 		if x <= 0 {
 			return certain(true)
 		}
-		m := combination(c, p)
-		return m.above(math.Log(x))
+		m := contrastOf(c, p)
+		return m.above(log(x))
 	case claim.Next:
 		m := next(one)
 		if one.Family == posterior.LognormalFamily {
 			if x <= 0 {
 				return certain(true)
 			}
-			x = math.Log(x)
+			x = log(x)
 		}
 		return m.above(x)
 	case claim.SD:
@@ -152,16 +142,16 @@ func linearAbove(c *claim.Claim, p []Process, x float64) Odds {
 
 // next is the posterior predictive law of one more unit: the mean's, wider by the unit's own
 // spread (Gelman et al., Bayesian Data Analysis, section 3.2).
-func next(p *Process) meansAt {
-	s := scaled{p.M, p.MLow, math.Sqrt(p.SS / p.Nu * (1 + 1/p.K)), p.Nu}
-	return combine(s, 1, nil, 0)
+func next(p *Process) (k contrast) {
+	k.add(scaled{p.M, p.MLow, math.Sqrt(p.SS / p.Nu * (1 + 1/p.K)), p.Nu}, 1)
+	return k
 }
 
 func linearWithin(c *claim.Claim, p []Process, lo, hi float64) Odds {
 	one := &p[c.Terms[0].Process]
 	switch {
 	case c.Kind == claim.Mean || c.Kind == claim.Bias:
-		m := combination(c, p)
+		m := contrastOf(c, p)
 		return m.within(lo, hi)
 	case c.Kind == claim.Median || c.Kind == claim.Next && one.Family == posterior.LognormalFamily:
 		if hi <= 0 {
@@ -170,9 +160,9 @@ func linearWithin(c *claim.Claim, p []Process, lo, hi float64) Odds {
 		if lo <= 0 {
 			return linearAbove(c, p, hi).against()
 		}
-		lo, hi = math.Log(lo), math.Log(hi)
+		lo, hi = log(lo), log(hi)
 		if c.Kind == claim.Median {
-			m := combination(c, p)
+			m := contrastOf(c, p)
 			return m.within(lo, hi)
 		}
 		m := next(one)
@@ -197,9 +187,10 @@ func ratioAbove(c *claim.Claim, p []Process, r float64) Odds {
 	case claim.SD:
 		return sdRatioOdds(one.SS, one.Nu, two.SS, two.Nu, r)
 	case claim.Median:
-		second := meanOf(two)
-		m := combine(meanOf(one), 1, &second, -1)
-		return m.above(math.Log(r))
+		var m contrast
+		m.add(meanOf(one), 1)
+		m.add(meanOf(two), -1)
+		return m.above(log(r))
 	case claim.Proportion:
 		return betaLineOdds(one.A, one.B, two.A, two.B, r, 0)
 	}
