@@ -188,10 +188,10 @@ func (c *Claim) compare(b bounds, column int) *Error {
 	return nil
 }
 
-// Most processes in a sum of means, a sum of proportions or rates, and a contest. For a sum of
-// more than two means, and for a contest of means, package evidence has no exact route.
+// Most processes in a sum of means, a sum of proportions or rates, and a contest: beyond, package
+// evidence has no exact route that is quick enough.
 const (
-	mostMeans    = 2
+	mostMeans    = 12
 	mostCounts   = 2
 	mostExtremes = 64
 )
@@ -208,9 +208,9 @@ func (c *Claim) route() *Error {
 			what := map[Form]string{Ratio: "a ratio", Absolute: "an absolute value"}[c.Form]
 			return refuse(0, what+" against a bound that is not above 0", "a bound above 0")
 		}
-	case c.Form != Linear && c.Kind != Proportion && c.Kind != Rate:
+	case c.Form != Linear && c.Kind != Mean && c.Kind != Bias && c.Kind != Proportion && c.Kind != Rate:
 		return refuse(1, "max or min of several quantities "+string(c.Kind),
-			"max or min of proportion or rate, or the difference of two")
+			"max or min of mean, proportion or rate, or the difference of two")
 	case c.Form != Linear && n > mostExtremes:
 		return refuse(mostExtremes, fmt.Sprintf("%d processes", n), fmt.Sprintf("at most %d", mostExtremes))
 	}

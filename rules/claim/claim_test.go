@@ -201,11 +201,11 @@ func TestBind(t *testing.T) {
 // A claim about processes that happen to be called this and others is checked at the latest when
 // it is bound.
 func TestBindChecksWhatParseLeftToSpread(t *testing.T) {
-	c, err := Parse("mean(this) - mean(others) - mean(x) > 0")
+	c, err := Parse("rate(this) - rate(others) - rate(x) > 0")
 	if err != nil {
 		t.Fatal(err)
 	}
-	all := func(string) (Known, bool) { return Known{Family: posterior.NormalFamily}, true }
+	all := func(string) (Known, bool) { return Known{Family: posterior.PoissonFamily}, true }
 	if _, err := c.Bind(all, nil); err == nil || !strings.Contains(err.Error(), "a sum of 3") {
 		t.Error(err)
 	}

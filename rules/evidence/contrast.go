@@ -402,7 +402,7 @@ func (f *surface) begin(m *mixture, k *contrast) {
 	scale := 1 / (64 * far * far)
 	root, nu, rest := math.Sqrt(m.c[0]), k.nu[0], 0.0
 	for j := 1; j < m.n; j++ {
-		rest += k.scale[j] * k.scale[j]
+		rest += float64(k.scale[j] * k.scale[j])
 	}
 	for j := 1; j < m.n; j++ {
 		f.nodes[j][0].made, f.nodes[j][1].made = 0, 0
@@ -412,10 +412,10 @@ func (f *surface) begin(m *mixture, k *contrast) {
 		l := &f.levels[j]
 		l.last, l.per, l.rest = 0, scale/nu, scale*rest
 		clear(l.first[:])
-		w := math.Sqrt(float64(l.per*root*root)+l.rest) * (1 - 1e-9)
-		l.edges[0] = w / (1 + w) // C is at least (sum sqrt c_i)^2
+		w := float64(math.Sqrt(float64(l.per*root*root)+l.rest) * (1 - 1e-9))
+		l.edges[0] = w / (w + 1) // C is at least (sum sqrt c_i)^2
 		for i, g := range grades {
-			l.edges[i+1] = math.Max(1/(1+g/8), l.edges[0])
+			l.edges[i+1] = math.Max(1/(1+float64(g/8)), l.edges[0])
 		}
 	}
 }
@@ -498,7 +498,7 @@ func (f *surface) find(m *mixture, j int, z float64) *leaf {
 			if f.fit(m, j, l) || l.width < narrowest*l.lo || full {
 				l.made = true
 			} else {
-				half := l.width / 2
+				half := float64(l.width / 2)
 				l.kids = f.leaf(l.lo, half)
 				f.leaf(l.lo+half, half)
 			}

@@ -71,7 +71,7 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 			mean = one.A / one.B
 		}
 		if len(c.Terms) > 1 {
-			return 0, mean/2 + 1e-12
+			return 0, float64(mean/2) + 1e-12
 		}
 		return mean, mean / math.Sqrt(one.A+1)
 	case claim.Outside:
@@ -102,7 +102,7 @@ func quantile(c *claim.Claim, p []Process, logit, start, scale float64) float64 
 	for step := range 300 {
 		x := hi - fHi*(hi-lo)/(fHi-fLo)
 		if step%3 == 2 || !(x > lo && x < hi) {
-			x = lo + (hi-lo)/2
+			x = lo + float64((hi-lo)/2)
 		}
 		fx := f(x)
 		if math.Abs(fx) < 1e-13 || x <= lo || x >= hi || hi-lo < 4e-16*math.Max(math.Abs(lo), math.Abs(hi)) {
@@ -122,7 +122,7 @@ func quantile(c *claim.Claim, p []Process, logit, start, scale float64) float64 
 			moved = 1
 		}
 	}
-	return lo + (hi-lo)/2
+	return lo + float64((hi-lo)/2)
 }
 
 // bracket finds two places between which f, which grows, passes 0.

@@ -50,3 +50,21 @@ func BenchmarkContrast(b *testing.B) {
 		})
 	}
 }
+
+// BenchmarkLargest weighs all n at once.
+func BenchmarkLargest(b *testing.B) {
+	for _, n := range []int{2, 3, 10, 64} {
+		var r ranking
+		for i := range n {
+			p := group{float64(8 + 3*i), 33.9 - 0.05*float64(i%10), 0.5 + 0.03*float64(i%10)}.process()
+			r.add(meanOf(&p))
+		}
+		b.Run(fmt.Sprint(n), func(b *testing.B) {
+			b.ReportAllocs()
+			for b.Loop() {
+				r.p = [largestGroup]float64{}
+				r.weigh()
+			}
+		})
+	}
+}

@@ -197,7 +197,34 @@ func ratioAbove(c *claim.Claim, p []Process, r float64) Odds {
 	return gammaLineOdds(one.A, one.B, two.A, two.B, r, 0)
 }
 
+// meansAbove is extremeAbove of means: one less a tolerance is the largest of all or, their signs turned, not.
+func meansAbove(c *claim.Claim, p []Process, x float64) Odds {
+	var r ranking
+	sign := 1.0
+	if c.Form == claim.Smallest {
+		sign = -1
+	}
+	reference := meanOf(&p[c.Terms[0].Process])
+	for i, t := range c.Terms {
+		s := meanOf(&p[t.Process])
+		s.centre, s.centreLow = addPairs(s.centre, s.centreLow, -reference.centre, -reference.centreLow)
+		if i == 0 {
+			s.centre, s.centreLow = addPairs(s.centre, s.centreLow, -x, 0)
+		}
+		s.centre, s.centreLow = sign*s.centre, sign*s.centreLow
+		r.add(s)
+	}
+	if o := r.odds(0); sign > 0 {
+		return o
+	} else {
+		return o.against()
+	}
+}
+
 func extremeAbove(c *claim.Claim, p []Process, x float64) Odds {
+	if c.Kind == claim.Mean || c.Kind == claim.Bias {
+		return meansAbove(c, p, x)
+	}
 	var a, b [64]float64
 	n := len(c.Terms)
 	for i, t := range c.Terms {
