@@ -18,12 +18,14 @@ func Estimate(c *claim.Claim, p []Process) (Interval, error) {
 		return Interval{}, err
 	}
 	if m, ok := symmetric(c, p); ok {
-		upper := quantile(c, p, logit975, m.centre, m.width())
+		upper := quantile(c, p, logit975, m.centre+float64(2.1*m.width()), float64(0.5*m.width()))
 		return Interval{Median: m.centre, Lower: m.centre - m.beyond(upper), Upper: upper}, nil
 	}
 	start, scale := guess(c, p)
-	q := func(logit float64) float64 { return quantile(c, p, logit, start, scale) }
-	return Interval{Median: q(0), Lower: q(-logit975), Upper: q(logit975)}, nil
+	median := quantile(c, p, 0, start, scale)
+	lower := quantile(c, p, -logit975, median-2*scale, scale)
+	upper := quantile(c, p, logit975, median+2*scale, scale)
+	return Interval{Median: median, Lower: lower, Upper: upper}, nil
 }
 
 // symmetric gives the law of a quantity that is symmetric about its centre: its median is the
@@ -48,7 +50,7 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 	one := &p[c.Terms[0].Process]
 	switch c.Kind {
 	case claim.Mean, claim.Bias:
-		return 0, one.M/1e3 + meanOf(one).scale
+		return guessMeans(c, p)
 	case claim.Next:
 		return exp(one.M), exp(one.M)
 	case claim.Median:
@@ -80,49 +82,73 @@ func guess(c *claim.Claim, p []Process) (start, scale float64) {
 	return 1, 0.1
 }
 
+// guessMeans is guess for |contrast| and for one mean less the largest or smallest.
+func guessMeans(c *claim.Claim, p []Process) (start, scale float64) {
+	if c.Form == claim.Absolute {
+		k := contrastOf(c, p)
+		return math.Abs(k.centre), k.width()
+	}
+	one := meanOf(&p[c.Terms[0].Process])
+	rival := meanOf(&p[c.Terms[1].Process])
+	for _, t := range c.Terms[2:] {
+		if s := meanOf(&p[t.Process]); (s.centre > rival.centre) == (c.Form == claim.Largest) {
+			rival = s
+		}
+	}
+	return one.centre - rival.centre, hypot(one.scale, rival.scale)
+}
+
 // farOdds bounds the logarithms of odds that the search looks at: e^40 is far beyond the ends of
 // the interval, and the shape beyond would only lead a secant astray.
 const farOdds = 40
 
-// quantile is the x at which log(P(q < x)/P(q > x)) is logit: inside a bracket that is widened
-// first, by regula falsi with the Illinois rule, every third step being a bisection.
+// quantile is the x at which log(P(q < x)/P(q > x)) is logit: inside a bracket that is widened first, by
+// Chandrupatla's choice between inverse quadratic interpolation and bisection (Advances in Engineering
+// Software 28, 1997).
 func quantile(c *claim.Claim, p []Process, logit, start, scale float64) float64 {
 	f := func(x float64) float64 {
 		o := above(c, p, x)
 		return math.Max(math.Min(o.LogAgainst-o.LogFor, farOdds), -farOdds) - logit
 	}
-	lo, hi, fLo, fHi := bracket(f, start, scale)
-	if math.IsInf(lo, 0) {
-		return lo
+	a, b, fa, fb := bracket(f, start, scale)
+	if math.IsInf(a, 0) {
+		return a
 	}
-	if math.IsInf(hi, 0) {
-		return hi
+	if math.IsInf(b, 0) {
+		return b
 	}
-	moved := 0 // which end moved last: -1 lo, 1 hi
-	for step := range 300 {
-		x := hi - fHi*(hi-lo)/(fHi-fLo)
-		if step%3 == 2 || !(x > lo && x < hi) {
-			x = lo + float64((hi-lo)/2)
-		}
+	t := fa / (fa - fb)
+	for range 200 {
+		x := a + float64(t*(b-a))
 		fx := f(x)
-		if math.Abs(fx) < 1e-13 || x <= lo || x >= hi || hi-lo < 4e-16*math.Max(math.Abs(lo), math.Abs(hi)) {
-			return x
-		}
-		if fx < 0 {
-			lo, fLo = x, fx
-			if moved < 0 {
-				fHi /= 2
-			}
-			moved = -1
+		third, fthird := b, fb
+		if (fx < 0) == (fa < 0) {
+			third, fthird = a, fa
 		} else {
-			hi, fHi = x, fx
-			if moved > 0 {
-				fLo /= 2
-			}
-			moved = 1
+			b, fb = a, fa
 		}
+		a, fa = x, fx
+		best := a
+		if math.Abs(fb) < math.Abs(fa) {
+			best = b
+		}
+		least := float64(4e-16*math.Abs(best)) / math.Max(math.Abs(b-a), math.SmallestNonzeroFloat64)
+		if math.Abs(fx) < 1e-11 || least > 0.5 {
+			return best
+		}
+		t = step(a, b, third, fa, fb, fthird)
+		t = math.Min(math.Max(t, least), 1-least)
 	}
-	return lo + float64((hi-lo)/2)
+	return a
+}
+
+// step is where to look next, from a towards b as a share of the way.
+func step(a, b, c, fa, fb, fc float64) float64 {
+	xi, phi := (a-b)/(c-b), (fa-fb)/(fc-fb)
+	if float64(phi*phi) < xi && float64((1-phi)*(1-phi)) < 1-xi {
+		return float64(fa/(fb-fa)*(fc/(fb-fc))) + float64((c-a)/(b-a)*(fa/(fc-fa))*(fb/(fc-fb)))
+	}
+	return 0.5
 }
 
 // bracket finds two places between which f, which grows, passes 0.
