@@ -3,6 +3,7 @@ package rules
 import (
 	"encoding/json"
 	"fmt"
+	"maps"
 	"math"
 	"slices"
 	"strings"
@@ -22,7 +23,11 @@ type State struct {
 	processes map[string]*process
 	alarms    map[string]*alarm // rule name to its alarm
 	counters  counters
-	touched   map[string]bool // pieces changed since Pieces was last called
+	withdrawn map[uint64]bool     // batches that no longer count, by their index
+	recalls   map[string][]recall // of each process, the older first
+	history   History             // the journal before the event that is being applied
+	every     int64               // batches of a process between two recalls of it
+	touched   map[string]bool     // pieces changed since Pieces was last called
 
 	scratch []evidence.Process
 }
@@ -32,6 +37,7 @@ type process struct {
 	Family       posterior.Family   `json:"family"`
 	Remember     posterior.Remember `json:"remember"`
 	Taken        int64              `json:"taken"`   // measurements since the store began
+	Batches      int64              `json:"batches"` // that they came in
 	Segment      int                `json:"segment"` // number of the segment, counted from 0
 	SegmentSince time.Time          `json:"segment_since,omitzero"`
 	SegmentNote  string             `json:"segment_note,omitempty"`
@@ -65,16 +71,21 @@ func NewState() *State {
 		rulesOf:   map[string][]int{},
 		processes: map[string]*process{},
 		alarms:    map[string]*alarm{},
+		withdrawn: map[uint64]bool{},
+		recalls:   map[string][]recall{},
+		every:     recallEvery,
 		touched:   map[string]bool{},
 	}
 }
 
 // Names of the pieces a state is kept in.
 const (
-	planPiece     = "plan"
-	countersPiece = "counters"
-	processPiece  = "process/"
-	rulePiece     = "rule/"
+	planPiece      = "plan"
+	countersPiece  = "counters"
+	withdrawnPiece = "withdrawn"
+	processPiece   = "process/"
+	recallPiece    = "recall/"
+	rulePiece      = "rule/"
 )
 
 // Pieces are the parts of the state that have changed since the last call, encoded, each
@@ -90,12 +101,14 @@ func (s *State) Pieces() (map[string][]byte, error) {
 			part = &s.counters
 		case strings.HasPrefix(name, processPiece):
 			p := s.processes[strings.TrimPrefix(name, processPiece)]
-			memory, err := p.memory.AppendBinary(nil)
-			if err != nil {
+			if err := p.write(); err != nil {
 				return nil, fmt.Errorf("state of %s: %w", name, err)
 			}
-			p.Memory = memory
 			part = p
+		case name == withdrawnPiece:
+			part = slices.Sorted(maps.Keys(s.withdrawn))
+		case strings.HasPrefix(name, recallPiece):
+			part = s.recalls[strings.TrimPrefix(name, recallPiece)]
 		default:
 			a, ok := s.alarms[strings.TrimPrefix(name, rulePiece)]
 			if !ok {
@@ -141,11 +154,24 @@ func (s *State) restore(name string, text []byte) error {
 		if err := json.Unmarshal(text, p); err != nil {
 			return err
 		}
-		p.memory = posterior.NewMemory(p.Family, p.Remember)
-		if err := p.memory.UnmarshalBinary(p.Memory); err != nil {
+		s.processes[strings.TrimPrefix(name, processPiece)] = p
+		return p.read()
+	case name == withdrawnPiece:
+		var list []uint64
+		if err := json.Unmarshal(text, &list); err != nil {
 			return err
 		}
-		s.processes[strings.TrimPrefix(name, processPiece)] = p
+		for _, index := range list {
+			s.withdrawn[index] = true
+		}
+		return nil
+	case strings.HasPrefix(name, recallPiece):
+		var list []recall
+		s.recalls[strings.TrimPrefix(name, recallPiece)] = nil
+		if err := json.Unmarshal(text, &list); err != nil {
+			return err
+		}
+		s.recalls[strings.TrimPrefix(name, recallPiece)] = list
 		return nil
 	case strings.HasPrefix(name, rulePiece):
 		a := &alarm{}
@@ -156,6 +182,17 @@ func (s *State) restore(name string, text []byte) error {
 		return nil
 	}
 	return fmt.Errorf("no piece of that name belongs to a state")
+}
+
+// write encodes the memory into Memory; read decodes it from there.
+func (p *process) write() (err error) {
+	p.Memory, err = p.memory.AppendBinary(nil)
+	return err
+}
+
+func (p *process) read() error {
+	p.memory = posterior.NewMemory(p.Family, p.Remember)
+	return p.memory.UnmarshalBinary(p.Memory)
 }
 
 // use puts compiled rules in force.
@@ -182,6 +219,8 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 		return s.applyAcknowledged(e)
 	case e.Segment != nil:
 		return s.applySegment(e)
+	case e.Withdrawn != nil:
+		return s.applyWithdrawn(e)
 	case e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
 		return Outcomes{}, nil
 	}
@@ -202,20 +241,33 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 			}
 		}
 	}
-	due := map[int]bool{}
-	for _, series := range e.Batch.Series {
-		s.take(e, &series)
-		for _, r := range s.rulesOf[series.Process] {
-			due[r] = true
+	due := map[string]bool{}
+	if len(e.Batch.Replaces) > 0 {
+		var err error
+		if due, err = s.withdraw(e, e.Batch.Replaces); err != nil {
+			return Outcomes{}, err
 		}
+	}
+	for _, series := range e.Batch.Series {
+		name := series.Process
+		s.recalls[name] = s.remind(name, s.recalls[name], s.processes[name], e)
+		due[name] = true
+	}
+	for i := range e.Batch.Series {
+		s.take(e, &e.Batch.Series[i])
 	}
 	var out Outcomes
+	s.lookAt(e, due, &out)
+	return out, nil
+}
+
+// lookAt evaluates the rules that speak of any of the processes, in the order of the plan.
+func (s *State) lookAt(e *Event, processes map[string]bool, out *Outcomes) {
 	for i := range s.ready {
-		if due[i] {
-			s.look(e, i, &out)
+		if slices.ContainsFunc(s.ready[i].claim.Processes, func(p string) bool { return processes[p] }) {
+			s.look(e, i, out)
 		}
 	}
-	return out, nil
 }
 
 // of is the number looked at, or the exposure, of observation i.
@@ -228,7 +280,12 @@ func (s *Series) of(i int) float64 {
 
 // take adds a series to what its process remembers.
 func (s *State) take(e *Event, series *Series) {
-	p := s.processes[series.Process]
+	s.processes[series.Process].take(e, series)
+	s.touched[processPiece+series.Process] = true
+}
+
+// take adds a series to what the process remembers.
+func (p *process) take(e *Event, series *Series) {
 	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
 	// measurement is no later than its arrival.
 	now := e.At.UnixNano()
@@ -242,13 +299,13 @@ func (s *State) take(e *Event, series *Series) {
 	}
 	p.memory.AddBatch(series.Value, series.Of, within)
 	p.Taken += int64(len(series.Value))
+	p.Batches++
 	p.LastTaken = e.At
 	if len(times) > 0 {
 		if last := time.Unix(0, slices.Max(times)).UTC(); last.After(p.LastMeasured) {
 			p.LastMeasured = last
 		}
 	}
-	s.touched[processPiece+series.Process] = true
 }
 
 func (s *State) applyAdopted(e *Event) (Outcomes, error) {
@@ -289,14 +346,12 @@ func (s *State) fitProcesses(out *Outcomes) {
 	for _, c := range s.plan.Characteristics {
 		for _, line := range c.Lines {
 			name := ProcessName(c.Name, line)
-			old, ok := s.processes[name]
-			if ok && old.Family == c.Family && old.Remember == c.Remember {
+			old := s.processes[name]
+			p := fitted(old, &c)
+			if p == old {
 				continue
 			}
-			p := &process{Family: c.Family, Remember: c.Remember}
-			p.memory = posterior.NewMemory(c.Family, c.Remember)
-			if ok {
-				p.Taken, p.Segment, p.LastMeasured, p.LastTaken = old.Taken, old.Segment+1, old.LastMeasured, old.LastTaken
+			if old != nil {
 				out.Remarks = append(out.Remarks, fmt.Sprintf(
 					"%s: its family or what it remembers has changed, so its evidence starts anew", name))
 			}
@@ -304,6 +359,21 @@ func (s *State) fitProcesses(out *Outcomes) {
 			s.touched[processPiece+name] = true
 		}
 	}
+}
+
+// fitted is the process as a characteristic now wants it: itself where it fits, else one that
+// starts anew. There may have been none before.
+func fitted(old *process, c *Characteristic) *process {
+	if old != nil && old.Family == c.Family && old.Remember == c.Remember {
+		return old
+	}
+	p := &process{Family: c.Family, Remember: c.Remember}
+	p.memory = posterior.NewMemory(c.Family, c.Remember)
+	if old != nil {
+		p.Taken, p.Batches, p.Segment = old.Taken, old.Batches, old.Segment+1
+		p.LastMeasured, p.LastTaken = old.LastMeasured, old.LastTaken
+	}
+	return p
 }
 
 // retire ends the alarm of a rule that is gone or is no longer the same rule.
@@ -325,10 +395,7 @@ func (s *State) applySegment(e *Event) (Outcomes, error) {
 	var out Outcomes
 	due := map[int]bool{}
 	for _, name := range e.Segment.Processes {
-		p := s.processes[name]
-		p.memory.StartSegment()
-		p.Segment++
-		p.SegmentSince, p.SegmentNote = e.At, e.Segment.Note
+		s.processes[name].startSegment(e)
 		s.touched[processPiece+name] = true
 		for _, r := range s.rulesOf[name] {
 			due[r] = true
@@ -342,16 +409,28 @@ func (s *State) applySegment(e *Event) (Outcomes, error) {
 	return out, nil
 }
 
+// startSegment forgets what was measured before the event.
+func (p *process) startSegment(e *Event) {
+	p.memory.StartSegment()
+	p.Segment++
+	p.SegmentSince, p.SegmentNote = e.At, e.Segment.Note
+}
+
 // active says whether the condition of the alarm stands.
 func (a *alarm) active() bool { return a.State == Unacknowledged || a.State == Acked }
 
+// without is the state of an active alarm once its condition no longer stands.
+func (a *alarm) without() AlarmState {
+	if a.State == Unacknowledged {
+		return Returned
+	}
+	return Normal
+}
+
 // restart returns an active alarm to normal because its evidence begins anew.
 func (s *State) restart(e *Event, rule string, out *Outcomes) {
-	to := Normal
-	if s.alarms[rule].State == Unacknowledged {
-		to = Returned
-	}
-	s.step(e, rule, to, Change{Cause: EvidenceRestart, Note: e.Segment.Note, By: e.Segment.By, How: e.Segment.How}, out)
+	c := Change{Cause: EvidenceRestart, Note: e.Segment.Note, By: e.Segment.By, How: e.Segment.How}
+	s.step(e, rule, s.alarms[rule].without(), c, out)
 }
 
 func (s *State) applyAcknowledged(e *Event) (Outcomes, error) {
@@ -388,6 +467,9 @@ func (s *State) step(e *Event, rule string, to AlarmState, c Change, out *Outcom
 	if e.Batch != nil {
 		c.Source, c.File = e.Batch.Source, e.Batch.File
 	}
+	if w := e.Withdrawn; w != nil {
+		c.Note, c.By, c.How = w.Reason, w.By, w.How
+	}
 	a.State, a.Since = to, e.At
 	s.touched[rulePiece+rule] = true
 	out.Changes = append(out.Changes, c)
@@ -403,6 +485,9 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 	s.touched[rulePiece+r.Name] = true
 	out.Looks = append(out.Looks, look)
 	if look.Withheld != "" {
+		if a.active() && e.takesOut() {
+			s.step(e, r.Name, a.without(), Change{Cause: TakenOut}, out)
+		}
 		return
 	}
 	p := look.Odds().Probability()
@@ -410,11 +495,11 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 	case p >= r.Raise && !a.active():
 		s.raise(e, i, look, out)
 	case p <= r.Clear && a.active():
-		to := Normal
-		if a.State == Unacknowledged {
-			to = Returned
+		cause := Cleared
+		if e.takesOut() {
+			cause = TakenOut
 		}
-		s.step(e, r.Name, to, s.figures(i, look, Cleared), out)
+		s.step(e, r.Name, a.without(), s.figures(i, look, cause), out)
 	}
 }
 
