@@ -5,7 +5,7 @@
 // Buckets, their keys and values. Numbers in keys are 8 bytes, big-endian, so that they sort;
 // strings in composite keys end with a zero byte, which no source, feed or file name holds.
 //
-//	meta     "format"                 → "3": the version of this layout; another is refused
+//	meta     "format"                 → "4": the version of this layout; another is refused
 //	         "origin"                 → a random UUID, made with the store or its new origin
 //	         "signed"                 → size of the last checkpoint that Commit knew of
 //	origins  number, from 0           → Origin as JSON
@@ -16,7 +16,8 @@
 //	alarms   alarm number, index      → nothing: the records that changed an alarm
 //	state    name of a piece          → the piece, as the engine encoded it
 //	files    source 0 file            → FileMemory (files.go)
-//	contents SHA-256                  → index of the batch that took it, source 0 file
+//	contents SHA-256                  → index of the batch that took it last, source 0 file
+//	batches  source 0 file 0 index    → nothing: the records that counted a batch
 //	outbox   feed 0 number            → Message as JSON
 //
 // Beside the store lie the stamp (stamp.go) and, named by the origin, the key that checkpoints
@@ -57,7 +58,7 @@ var ErrStorage = errors.New("storage failed")
 
 const (
 	fileName = "steelyard.db"
-	format   = "3"
+	format   = "4"
 )
 
 var (
@@ -71,9 +72,10 @@ var (
 	outboxBucket   = []byte("outbox")
 	treeBucket     = []byte("tree")
 	originsBucket  = []byte("origins")
+	batchesBucket  = []byte("batches")
 
 	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
-		treeBucket, originsBucket}
+		treeBucket, originsBucket, batchesBucket}
 
 	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
@@ -375,6 +377,9 @@ func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 		}
 	}
 	if err := tx.Bucket(timesBucket).Put(append(number(uint64(e.Event.At.UnixNano())), index...), nil); err != nil {
+		return err
+	}
+	if err := noteBatch(tx, e); err != nil {
 		return err
 	}
 	for _, c := range e.Outcomes.Changes {
