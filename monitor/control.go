@@ -26,6 +26,7 @@ type Counter interface {
 	Explain(alarm int) (*Explanation, error)
 	Acknowledge(alarm int, by, how, note string) (*Answer, error)
 	WriteDayLog(day string) (log *daylog.Log, markdown, machine string, err error)
+	Withdraw(w Withdrawal) (*Withdrawn, error)
 	Close() error
 }
 
@@ -152,6 +153,7 @@ func (d *Desk) handler() http.Handler {
 			reply(w, writtenLog{log, markdown, machine}, err)
 		}
 	})
+	d.handleCorrections(mux)
 	return mux
 }
 

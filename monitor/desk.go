@@ -45,6 +45,7 @@ type Desk struct {
 	mu      sync.Mutex // held for one apply and commit, or one copy out of the state
 	state   *rules.State
 	sources map[string]*SourceStatus
+	coming  []store.Entry     // of the commit at hand
 	failed  error             // the first storage error; nothing is committed after it
 	trouble map[string]string // of each feed: why its last delivery failed
 
@@ -83,6 +84,7 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	if d.state, err = d.restore(); err != nil {
 		return nil, errors.Join(err, s.Close())
 	}
+	d.state.Consult(&history{store: s, coming: &d.coming})
 	return d, nil
 }
 
@@ -120,7 +122,12 @@ func (d *Desk) commit(list []happening) (outcomes []rules.Outcomes, refused []er
 		e := &list[i].event
 		e.Index, e.At = next+uint64(len(step.Entries)), at
 		before := d.state.Plan()
+		d.coming = step.Entries
 		outcomes[i], refused[i] = d.state.Apply(e)
+		if errors.Is(refused[i], store.ErrStorage) {
+			d.failed = refused[i]
+			return nil, nil, d.failed
+		}
 		if refused[i] != nil {
 			continue
 		}

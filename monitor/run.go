@@ -289,6 +289,8 @@ func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
 		s := note(e.Again.Source, e.Again.File)
 		s.Again++
 		d.log.Info().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Again.File).Msg("not counted: the same content was taken before as " + e.Again.Name)
+	case e.Withdrawn != nil:
+		d.log.Warn().Uint64("record", e.Index).Uints64("batches", e.Withdrawn.Batches).Str("by", e.Withdrawn.By).Msg("withdrawn: " + e.Withdrawn.Reason)
 	case e.Watching != nil:
 		s := d.sources[e.Watching.Source]
 		s.Able, s.Why = e.Watching.Able, e.Watching.Why

@@ -85,8 +85,29 @@ func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) 
 	for _, s := range x.Steps {
 		fmt.Fprintf(w, "  %s (record %d) %s: %s\n", at(s.At), s.Record, s.Cause, s.Text)
 	}
+	printWithdrawnSince(w, x, zone)
 	_, err := fmt.Fprintln(w, "\n"+x.Caution)
 	return err
+}
+
+// printWithdrawnSince says what of the evidence no longer counts.
+func printWithdrawnSince(w io.Writer, x *monitor.Explanation, zone *time.Location) {
+	if x.Stands == nil {
+		return
+	}
+	fmt.Fprintln(w, "\nWithdrawn since")
+	for _, s := range x.Withdrawn {
+		by := ""
+		if s.By != "" {
+			by = " by " + s.By
+		}
+		fmt.Fprintf(w, "  the batch of record %d, at %s (record %d)%s: %s\n", s.Batch, clock(s.At, zone), s.Record, by, s.Reason)
+	}
+	if *x.Stands {
+		fmt.Fprintf(w, "  Without them %s would have been raised at the same record.\n", x.Alarm)
+	} else {
+		fmt.Fprintf(w, "  Without them %s would not have been raised at that record.\n", x.Alarm)
+	}
 }
 
 func lookText(l *monitor.LookAt) (p, odds string) {

@@ -53,6 +53,8 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 		c.watching(e)
 	case e.Adopted != nil:
 		c.adopted(e)
+	case e.Withdrawn != nil:
+		c.withdrawn(e)
 	case e.Segment != nil:
 		c.remark(e.At, "A new segment began for %s (%s), by %s.",
 			strings.Join(e.Segment.Processes, ", "), e.Segment.Note, e.Segment.By)
@@ -85,6 +87,9 @@ func (c *Collector) source(name string) *Source {
 
 func (c *Collector) batch(e *rules.Event) {
 	b := e.Batch
+	if len(b.Replaces) > 0 {
+		c.remark(e.At, "File %s of %s (record %d) takes the place of %s, which counts no more.", b.File, b.Source, e.Index, records(b.Replaces))
+	}
 	s := c.source(b.Source)
 	s.Files++
 	s.Rows += len(b.Rows.Line)
