@@ -77,11 +77,11 @@ func TestRigOutOfCalibration(t *testing.T) {
 		}
 		return rules.Event{Batch: batch}
 	}
-	s.commit1(b("rig", "head.L1", 33)) // 1
-	s.commit1(b("rig", "head.L4", 33)) // 2
+	s.commit1(b("rig", "head.L1", 33))           // 1
+	s.commit1(b("rig", "head.L4", 33))           // 2
 	raised := s.commit1(b("rig", "head.L4", 36)) // 3
 	s.commit1(b("rig", "head.L4", 36))           // 4
-	s.commit1(b("rig", "head.L4", 36)) // 5, after the two times
+	s.commit1(b("rig", "head.L4", 36))           // 5, after the two times
 	if len(raised.Changes) != 1 || raised.Changes[0].Cause != rules.Raised {
 		t.Fatalf("%+v", raised.Changes)
 	}
@@ -231,4 +231,3 @@ func BenchmarkWithdraw(b *testing.B) {
 		})
 	}
 }
-

@@ -159,7 +159,10 @@ type Again struct {
 	Name   string `json:"name"`  // the source and file under which it was taken
 }
 
-// Segment starts a new segment of processes.
+// Segment starts a new segment of processes. Without Since it begins with what is taken in
+// after it, whenever that was measured. With Since, a moment before the event and not before
+// the segment that it ends, it begins there: what was measured earlier does not count in it,
+// also where it arrives later, and what was measured since and has arrived counts.
 type Segment struct {
 	Processes []string  `json:"processes"`
 	Since     time.Time `json:"since,omitzero"`

@@ -41,6 +41,8 @@ type process struct {
 	Segment      int                `json:"segment"` // number of the segment, counted from 0
 	SegmentSince time.Time          `json:"segment_since,omitzero"`
 	SegmentNote  string             `json:"segment_note,omitempty"`
+	SegmentFrom  time.Time          `json:"segment_from,omitzero"` // measurements made earlier do not count in the segment
+	Began        uint64             `json:"began"`                 // the event with which the segment, or the process, began
 	LastMeasured time.Time          `json:"last_measured,omitzero"`
 	LastTaken    time.Time          `json:"last_taken,omitzero"`
 	Memory       []byte             `json:"memory"`
@@ -253,10 +255,10 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 		s.recalls[name] = s.remind(name, s.recalls[name], s.processes[name], e)
 		due[name] = true
 	}
-	for i := range e.Batch.Series {
-		s.take(e, &e.Batch.Series[i])
-	}
 	var out Outcomes
+	for i := range e.Batch.Series {
+		s.take(e, &e.Batch.Series[i], &out)
+	}
 	s.lookAt(e, due, &out)
 	return out, nil
 }
@@ -264,10 +266,14 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 // lookAt evaluates the rules that speak of any of the processes, in the order of the plan.
 func (s *State) lookAt(e *Event, processes map[string]bool, out *Outcomes) {
 	for i := range s.ready {
-		if slices.ContainsFunc(s.ready[i].claim.Processes, func(p string) bool { return processes[p] }) {
+		if speaksOf(s.ready[i].claim, processes) {
 			s.look(e, i, out)
 		}
 	}
+}
+
+func speaksOf(c *claim.Claim, processes map[string]bool) bool {
+	return slices.ContainsFunc(c.Processes, func(p string) bool { return processes[p] })
 }
 
 // of is the number looked at, or the exposure, of observation i.
@@ -279,26 +285,21 @@ func (s *Series) of(i int) float64 {
 }
 
 // take adds a series to what its process remembers.
-func (s *State) take(e *Event, series *Series) {
-	s.processes[series.Process].take(e, series)
+func (s *State) take(e *Event, series *Series, out *Outcomes) {
+	p := s.processes[series.Process]
+	if before := p.take(e, series); before > 0 {
+		out.Remarks = append(out.Remarks, fmt.Sprintf(
+			"%s: %d of %d measurements of file %s of %s were made before its segment began (%s) and do not count in it",
+			series.Process, before, len(series.Value), e.Batch.File, e.Batch.Source, p.SegmentFrom.Format(time.RFC3339)))
+	}
 	s.touched[processPiece+series.Process] = true
 }
 
-// take adds a series to what the process remembers.
-func (p *process) take(e *Event, series *Series) {
-	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
-	// measurement is no later than its arrival.
-	now := e.At.UnixNano()
-	times, within := make([]int64, len(series.Value)), make([]int64, len(series.Value))
-	for i, row := range series.Row {
-		times[i] = now
-		if e.Batch.Rows.Time != nil {
-			times[i] = e.Batch.Rows.Time[row]
-		}
-		within[i] = min(times[i], now)
-	}
-	p.memory.AddBatch(series.Value, series.Of, within)
-	p.Taken += int64(len(series.Value))
+// take adds a series to what the process knows, and says how many of its measurements were made
+// before the segment.
+func (p *process) take(e *Event, series *Series) (before int) {
+	times := timesOf(e, series)
+	p.Taken += int64(len(times))
 	p.Batches++
 	p.LastTaken = e.At
 	if len(times) > 0 {
@@ -306,6 +307,54 @@ func (p *process) take(e *Event, series *Series) {
 			p.LastMeasured = last
 		}
 	}
+	return p.remember(e, series, times)
+}
+
+// timesOf are the times at which a series was measured; that of the event where the source has none.
+func timesOf(e *Event, series *Series) []int64 {
+	times := make([]int64, len(series.Value))
+	for i, row := range series.Row {
+		times[i] = e.At.UnixNano()
+		if e.Batch.Rows.Time != nil {
+			times[i] = e.Batch.Rows.Time[row]
+		}
+	}
+	return times
+}
+
+// remember adds what of a series belongs to the segment to the memory.
+func (p *process) remember(e *Event, series *Series, times []int64) (before int) {
+	values, of := series.Value, series.Of
+	if from := p.SegmentFrom; !from.IsZero() && slices.ContainsFunc(times, func(t int64) bool { return t < from.UnixNano() }) {
+		values, of, times, before = since(from.UnixNano(), values, of, times)
+		if len(values) == 0 {
+			return before
+		}
+	}
+	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
+	// measurement is no later than its arrival.
+	now := e.At.UnixNano()
+	within := make([]int64, len(times))
+	for i, t := range times {
+		within[i] = min(t, now)
+	}
+	p.memory.AddBatch(values, of, within)
+	return before
+}
+
+// since leaves out the measurements made before a moment, and counts them.
+func since(from int64, values, of []float64, times []int64) (v, o []float64, t []int64, before int) {
+	for i := range values {
+		if times[i] < from {
+			before++
+			continue
+		}
+		v, t = append(v, values[i]), append(t, times[i])
+		if of != nil {
+			o = append(o, of[i])
+		}
+	}
+	return v, o, t, before
 }
 
 func (s *State) applyAdopted(e *Event) (Outcomes, error) {
@@ -319,7 +368,7 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 	s.plan = plan
 	s.touched[planPiece] = true
 	s.touched[countersPiece] = true
-	s.fitProcesses(&out)
+	s.fitProcesses(e, &out)
 	s.use(ready)
 	versions := map[string]string{}
 	for _, r := range ready {
@@ -342,12 +391,12 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 
 // fitProcesses makes a process for each the plan has, and starts one anew whose family or
 // way of remembering has changed: what it held does not answer the new question.
-func (s *State) fitProcesses(out *Outcomes) {
+func (s *State) fitProcesses(e *Event, out *Outcomes) {
 	for _, c := range s.plan.Characteristics {
 		for _, line := range c.Lines {
 			name := ProcessName(c.Name, line)
 			old := s.processes[name]
-			p := fitted(old, &c)
+			p := fitted(old, &c, e.Index)
 			if p == old {
 				continue
 			}
@@ -362,12 +411,12 @@ func (s *State) fitProcesses(out *Outcomes) {
 }
 
 // fitted is the process as a characteristic now wants it: itself where it fits, else one that
-// starts anew. There may have been none before.
-func fitted(old *process, c *Characteristic) *process {
+// starts anew with the event. There may have been none before.
+func fitted(old *process, c *Characteristic, event uint64) *process {
 	if old != nil && old.Family == c.Family && old.Remember == c.Remember {
 		return old
 	}
-	p := &process{Family: c.Family, Remember: c.Remember}
+	p := &process{Family: c.Family, Remember: c.Remember, Began: event}
 	p.memory = posterior.NewMemory(c.Family, c.Remember)
 	if old != nil {
 		p.Taken, p.Batches, p.Segment = old.Taken, old.Batches, old.Segment+1
@@ -386,36 +435,6 @@ func (s *State) retire(e *Event, name string, out *Outcomes) {
 	s.touched[rulePiece+name] = true
 }
 
-func (s *State) applySegment(e *Event) (Outcomes, error) {
-	for _, name := range e.Segment.Processes {
-		if _, _, ok := s.plan.split(name); !ok {
-			return Outcomes{}, fmt.Errorf("there is no process %q in the plan", name)
-		}
-	}
-	var out Outcomes
-	due := map[int]bool{}
-	for _, name := range e.Segment.Processes {
-		s.processes[name].startSegment(e)
-		s.touched[processPiece+name] = true
-		for _, r := range s.rulesOf[name] {
-			due[r] = true
-		}
-	}
-	for i, r := range s.ready {
-		if due[i] && s.alarms[r.Name].active() {
-			s.restart(e, r.Name, &out)
-		}
-	}
-	return out, nil
-}
-
-// startSegment forgets what was measured before the event.
-func (p *process) startSegment(e *Event) {
-	p.memory.StartSegment()
-	p.Segment++
-	p.SegmentSince, p.SegmentNote = e.At, e.Segment.Note
-}
-
 // active says whether the condition of the alarm stands.
 func (a *alarm) active() bool { return a.State == Unacknowledged || a.State == Acked }
 
@@ -425,12 +444,6 @@ func (a *alarm) without() AlarmState {
 		return Returned
 	}
 	return Normal
-}
-
-// restart returns an active alarm to normal because its evidence begins anew.
-func (s *State) restart(e *Event, rule string, out *Outcomes) {
-	c := Change{Cause: EvidenceRestart, Note: e.Segment.Note, By: e.Segment.By, How: e.Segment.How}
-	s.step(e, rule, s.alarms[rule].without(), c, out)
 }
 
 func (s *State) applyAcknowledged(e *Event) (Outcomes, error) {

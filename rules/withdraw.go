@@ -161,17 +161,20 @@ func (r *rebuilding) add(old *Event) error {
 			c := &old.Adopted.Plan.Characteristics[i]
 			for _, line := range c.Lines {
 				if name := ProcessName(c.Name, line); r.concerns(name, old) {
-					r.processes[name] = fitted(r.processes[name], c)
+					r.processes[name] = fitted(r.processes[name], c, old.Index)
 				}
 			}
 		}
 	case old.Segment != nil:
 		for _, name := range old.Segment.Processes {
-			if r.concerns(name, old) {
-				r.processes[name].startSegment(old)
+			if !r.concerns(name, old) {
+				continue
+			}
+			if err := r.processes[name].startSegment(old, name, r.state.history, r.isOut); err != nil {
+				return err
 			}
 		}
-	case old.Batch != nil && !r.out[old.Index] && !r.state.withdrawn[old.Index]:
+	case old.Batch != nil && !r.isOut(old.Index):
 		for _, series := range old.Batch.Series {
 			if name := series.Process; r.concerns(name, old) {
 				r.recalls[name] = r.state.remind(name, r.recalls[name], r.processes[name], old)
@@ -185,6 +188,9 @@ func (r *rebuilding) add(old *Event) error {
 	}
 	return nil
 }
+
+// isOut says whether a batch does not count.
+func (r *rebuilding) isOut(index uint64) bool { return r.out[index] || r.state.withdrawn[index] }
 
 // concerns says whether an event of the journal is still to be added to a process.
 func (r *rebuilding) concerns(name string, old *Event) bool {

@@ -206,14 +206,27 @@ func (p *plant) some() (taken []uint64) {
 	return taken
 }
 
-func (p *plant) event() Event {
+// segment starts one for one process, sometimes in the past.
+func (p *plant) segment(live *State) Event {
+	name := rapid.SampledFrom(p.plan.Processes()).Draw(p.t, "process")
+	seg := &Segment{Processes: []string{name}, Note: "new insert"}
+	if rapid.Bool().Draw(p.t, "past") {
+		seg.Since = p.clock.Add(-time.Duration(rapid.IntRange(0, 300).Draw(p.t, "ago")) * time.Second)
+		if began := live.processes[name].SegmentSince; seg.Since.Before(began) {
+			seg.Since = began
+		}
+	}
+	return Event{Segment: seg}
+}
+
+func (p *plant) event(live *State) Event {
 	kinds := []string{"batch", "batch", "batch", "batch", "segment", "adopted"}
 	if len(p.counting) > 0 {
 		kinds = append(kinds, "withdrawn", "replaced")
 	}
 	switch rapid.SampledFrom(kinds).Draw(p.t, "event") {
 	case "segment":
-		return Event{Segment: &Segment{Processes: []string{rapid.SampledFrom(p.plan.Processes()).Draw(p.t, "process")}, Note: "new insert"}}
+		return p.segment(live)
 	case "adopted":
 		plan := p.plan
 		plan.Characteristics = append([]Characteristic(nil), plan.Characteristics...)
@@ -241,7 +254,7 @@ func TestAsIfNeverCounted(t *testing.T) {
 		for i := range rapid.IntRange(2, 40).Draw(rt, "events") {
 			e := Event{Adopted: &Adopted{Plan: p.plan}}
 			if i > 0 {
-				e = p.event()
+				e = p.event(live)
 			}
 			p.clock = p.clock.Add(time.Duration(rapid.IntRange(0, 40).Draw(rt, "pause")) * time.Second)
 			e.Index, e.At = uint64(i), p.clock
@@ -256,11 +269,14 @@ func TestAsIfNeverCounted(t *testing.T) {
 				live = restarted(rt, live, saved, &p.journal)
 			}
 		}
-		never := NewState()
+		never, before := NewState(), &journal{}
+		never.Consult(before)
 		for _, e := range p.journal {
+			*before = append(*before, Event{Index: e.Index})
 			if e.Withdrawn != nil || live.IsWithdrawn(e.Index) {
 				continue
 			}
+			(*before)[e.Index] = e
 			if e.Batch != nil {
 				b := *e.Batch
 				b.Replaces = nil
@@ -307,7 +323,46 @@ func same(t *rapid.T, name string, got, want *process, now time.Time) {
 		t.Errorf("%s: believed %+v, want %+v", name, got.memory.Sums(), want.memory.Sums())
 	}
 	if got.Taken != want.Taken || got.Batches != want.Batches || got.Segment != want.Segment ||
-		!got.LastMeasured.Equal(want.LastMeasured) || !got.LastTaken.Equal(want.LastTaken) {
+		!got.SegmentSince.Equal(want.SegmentSince) || !got.LastMeasured.Equal(want.LastMeasured) || !got.LastTaken.Equal(want.LastTaken) {
 		t.Errorf("%s: %+v, want %+v", name, got, want)
+	}
+}
+
+// A tool was changed at a moment, and it is said later: what was measured before no longer counts,
+// what was measured since does, and a late file is divided at the same moment.
+func TestSegmentFromAMoment(t *testing.T) {
+	d, j := keeping(t)
+	timed := func(process string, from time.Time, values ...float64) Event {
+		e := batch(process, values...)
+		for i := range values {
+			e.Batch.Rows.Time = append(e.Batch.Rows.Time, from.Add(time.Duration(i)*time.Second).UnixNano())
+		}
+		return e
+	}
+	begun := at(0)
+	d.keep(j, batch("head.L1", spread(33, 12)...))
+	if got := states(d.keep(j, timed("head.L4", begun.Add(-9*time.Second), spread(35, 12)...))); got != "raised:unacknowledged " {
+		t.Fatal(got)
+	}
+	mark := Event{Segment: &Segment{Processes: []string{"head.L4"}, Since: begun, Note: "new impeller", By: "the lead", How: "test"}}
+	out := d.keep(j, mark)
+	if got := states(out); got != "evidence restart:returned " || len(out.Looks) != 1 || !strings.Contains(out.Looks[0].Withheld, "3 of the 4 units") {
+		t.Errorf("%q, %+v", got, out.Looks)
+	}
+	out = d.keep(j, timed("head.L4", begun.Add(-2*time.Second), 40, 40, 33, 33.1, 33.2))
+	if len(out.Remarks) != 1 || !strings.Contains(out.Remarks[0], "2 of 5 measurements of file f.csv of rig were made before its segment began") {
+		t.Errorf("%q", out.Remarks)
+	}
+	if sums, err := d.s.Sums("head.L4"); err != nil || sums.N != 6 || sums.Mean > 35.5 {
+		t.Errorf("%+v, %v", sums, err)
+	}
+	for _, c := range []struct {
+		since time.Time
+		says  string
+	}{{begun.Add(-time.Second), "began later"}, {begun.Add(time.Hour), "still to come"}} {
+		e := Event{Index: d.next, At: at(d.next), Segment: &Segment{Processes: []string{"head.L4"}, Since: c.since}}
+		if _, err := d.s.Apply(&e); err == nil || !strings.Contains(err.Error(), c.says) {
+			t.Errorf("since %v: %v", c.since, err)
+		}
 	}
 }
