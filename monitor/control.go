@@ -27,6 +27,7 @@ type Counter interface {
 	Acknowledge(alarm int, by, how, note string) (*Answer, error)
 	WriteDayLog(day string) (log *daylog.Log, markdown, machine string, err error)
 	Withdraw(w Withdrawal) (*Withdrawn, error)
+	Mark(m Mark) (*Marked, error)
 	Close() error
 }
 

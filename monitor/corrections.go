@@ -11,9 +11,21 @@ func (d *Desk) handleCorrections(mux *http.ServeMux) {
 			reply(w, a, err)
 		}
 	})
+	mux.HandleFunc("POST /mark", func(w http.ResponseWriter, r *http.Request) {
+		var q Mark
+		if ask(w, r, &q) {
+			a, err := d.Mark(q)
+			reply(w, a, err)
+		}
+	})
 }
 
 func (r *remote) Withdraw(w Withdrawal) (*Withdrawn, error) {
 	a := &Withdrawn{}
 	return a, r.call("POST", "/withdraw", w, a)
+}
+
+func (r *remote) Mark(m Mark) (*Marked, error) {
+	a := &Marked{}
+	return a, r.call("POST", "/mark", m, a)
 }

@@ -75,6 +75,9 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	for _, src := range cfg.Sources {
 		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}
 	}
+	for _, src := range watchMarks(cfg) {
+		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}
+	}
 	for _, f := range cfg.Feeds {
 		d.told[f.Name] = make(chan struct{}, 1)
 	}

@@ -58,6 +58,9 @@ func (d *Desk) Status() (*Status, error) {
 	for _, src := range d.cfg.Sources {
 		st.Sources = append(st.Sources, *d.sources[src.Name])
 	}
+	for _, src := range watchMarks(d.cfg) {
+		st.Sources = append(st.Sources, *d.sources[src.Name])
+	}
 	for _, f := range d.cfg.Feeds {
 		waiting, err := d.waiting(f.Name)
 		if err != nil {

@@ -34,6 +34,7 @@ type commandLine struct {
 	Explain     explainVerb     `cmd:"" help:"Show what an alarm rests on."`
 	Daylog      daylogVerb      `cmd:"" help:"Write the log of a production day."`
 	Withdraw    withdrawVerb    `cmd:"" help:"Take batches out of what counts, with a reason."`
+	Mark        markVerb        `cmd:"" help:"Start a segment: a tool was changed, new material came."`
 	Weigh       weighVerb       `cmd:"" help:"Weigh a claim once, on given figures."`
 }
 

@@ -21,7 +21,14 @@ type Config struct {
 	Plan    rules.Plan
 	Sources []Source // in the order of the file
 	Feeds   []Feed   // in the order of the file
+
+	// Marks is the folder of marks, watched as a source is; nil where there is none. Nothing in
+	// it is measured: its Columns are empty.
+	Marks *Source
 }
+
+// MarksName is what the folder of marks is called among the sources.
+const MarksName = "marks"
 
 // Site is where the program stands.
 type Site struct {

@@ -19,6 +19,7 @@ type rawFile struct {
 	Source         map[string]rawSource         `toml:"source"`
 	Rule           []rawRule                    `toml:"rule"`
 	Feed           map[string]rawFeed           `toml:"feed"`
+	Marks          *rawMarks                    `toml:"marks"`
 }
 
 type rawSite struct {
@@ -62,6 +63,13 @@ type rawSource struct {
 	TimeFormat string         `toml:"time_format"`
 	TimeZone   string         `toml:"time_zone"`
 	Columns    map[string]any `toml:"columns"`
+}
+
+type rawMarks struct {
+	Folder string `toml:"folder"`
+	Files  string `toml:"files"`
+	Settle string `toml:"settle"`
+	Scan   string `toml:"scan"`
 }
 
 type rawRule struct {

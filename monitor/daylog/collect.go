@@ -6,6 +6,7 @@ import (
 	"strings"
 	"time"
 
+	"steelyard/monitor/config"
 	"steelyard/rules"
 )
 
@@ -45,6 +46,11 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 	case e.Held != nil:
 		c.source(e.Held.Source).HeldFiles++
 		c.held(Held{At: e.At, Record: e.Index, Source: e.Held.Source, File: e.Held.File, Reason: e.Held.Reason})
+		if e.Held.Source == config.MarksName { // of other files held whole the first reason says enough
+			for _, row := range e.Held.Rows {
+				c.held(Held{At: e.At, Record: e.Index, Source: e.Held.Source, File: e.Held.File, Line: row.Line, Reason: row.Reason, Text: row.Text})
+			}
+		}
 	case e.Again != nil:
 		c.source(e.Again.Source).Again++
 	case e.Started != nil:
@@ -56,8 +62,12 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 	case e.Withdrawn != nil:
 		c.withdrawn(e)
 	case e.Segment != nil:
-		c.remark(e.At, "A new segment began for %s (%s), by %s.",
-			strings.Join(e.Segment.Processes, ", "), e.Segment.Note, e.Segment.By)
+		since := ""
+		if t := e.Segment.Since; !t.IsZero() {
+			since = " at " + t.In(c.zone).Format("2006-01-02 15:04:05")
+		}
+		c.remark(e.At, "A new segment began%s for %s (%s), by %s.",
+			since, strings.Join(e.Segment.Processes, ", "), e.Segment.Note, e.Segment.By)
 	}
 	for i := range out.Changes {
 		ch := &out.Changes[i]
