@@ -270,19 +270,30 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 		return happening{}, err
 	}
 	name := source + " " + file
+	withdrawn := found && d.isWithdrawn(index)
 	if !found {
 		name, found = fresh[a.Reading.SHA256]
 		index = d.store.Next()
 	}
-	if found {
+	replaces := d.source(a.Source).Resent == "replace" && old.Counted
+	switch {
+	case withdrawn && !(replaces && source == a.Source && file == a.File):
+		reason := fmt.Sprintf("%s: this content was counted before (record %d, %s) and has been withdrawn since, so it is not counted again; "+
+			"`steelyard held` takes it after all", a.File, index, name)
+		return d.hold(a, heldOf(a, reason), memory)
+	case found && !withdrawn:
 		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: a.Reading.Batch.SHA256, First: index, Name: name}}
 		memory.Counted = true
 		return happening{e, []store.FileMemory{memory}}, nil
 	}
 	if old.Counted {
-		reason := fmt.Sprintf("%s: a file of this name was counted before with other content (record %d), and counting both could count a row twice; "+
-			"drop what is new under a new name", a.File, old.Index)
-		return d.hold(a, heldOf(a, reason), memory)
+		reason, err := d.resent(a)
+		if err != nil {
+			return happening{}, err
+		}
+		if reason != "" {
+			return d.hold(a, heldOf(a, reason), memory)
+		}
 	}
 	memory.Counted, memory.Batch = true, true
 	fresh[a.Reading.SHA256] = a.Source + " " + a.File

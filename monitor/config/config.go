@@ -58,6 +58,7 @@ type Source struct {
 	Settle  time.Duration // a file is read once it has not changed for this long; 0..1h
 	Scan    time.Duration // the folder is looked through this often whatever the watcher says
 	Largest int64         // bytes; a larger file is held unread
+	Resent  string        // other content under a name that was counted: "hold", "add" or "replace"
 	Form    Form
 	Columns Columns
 }

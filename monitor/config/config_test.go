@@ -103,6 +103,12 @@ func TestSaysWhatIsWrong(t *testing.T) {
 		{"", "[source.two]\nfolder = \"d2\"\nlargest = \"3 XB\"\ncolumns = { line = \"l\", head = \"h\" }", "", `such as "64MB"`},
 		{"", "[source.two]\nfolder = \"d2\"\ndecimal = \",\"\ngrouping = \",\"\ncolumns = { line = \"l\", head = \"h\" }", "", "neither the decimal sign"},
 		{"", "[source.two]\nfolder = \"d2\"\nencoding = \"utf8\"\ncolumns = { line = \"l\", head = \"h\" }", "", `did you mean "utf-8"`},
+		{"", "resent = \"replaced\"", "", `did you mean "replace"`},
+		{"", "[marks]\nfolder = \"drop\"", "", `the source "rig" watches the same folder`},
+		{"", "[marks]\nfolder = \"state/m\"", "", "outside the state folder"},
+		{"", "[marks]\nfiles = \"*\"", "", "the marks have no folder"},
+		{"", "[marks]\nfolder = \"m\"\nfiels = \"*\"", "", `did you mean "files"`},
+		{"", "[marks]\nfolder = \"m\"\n[source.marks]\nfolder = \"d2\"\ncolumns = { line = \"l\", head = \"h\" }", "", "taken by the folder of marks"},
 		{"", "[site]", "", "site"},
 	} {
 		_, err := parse(t, c.characteristic, c.source, c.rules)

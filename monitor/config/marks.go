@@ -3,7 +3,10 @@ package config
 import (
 	"cmp"
 	"path/filepath"
+	"slices"
 	"time"
+
+	"steelyard/rules/claim"
 )
 
 // mostMarks is the size of the largest file of marks that is read, in bytes.
@@ -36,4 +39,13 @@ func (c *checker) marks(raw *rawFile) {
 		c.fault("marks.folder", "", "a folder outside the state folder", "the folder of marks %s lies in the state folder", s.Folder)
 	}
 	c.cfg.Marks = s
+}
+
+// resent is what becomes of other content under a name that was counted.
+func (c *checker) resent(key, text string) string {
+	ways := []string{"hold", "add", "replace"}
+	if text = cmp.Or(text, "hold"); !slices.Contains(ways, text) {
+		c.fault(key, claim.Nearest(text, ways), `"hold", "add" or "replace"`, "read %q", text)
+	}
+	return text
 }

@@ -53,6 +53,7 @@ type rawSource struct {
 	Settle     string         `toml:"settle"`
 	Scan       string         `toml:"scan"`
 	Largest    string         `toml:"largest"`
+	Resent     string         `toml:"resent"`
 	Delimiter  string         `toml:"delimiter"`
 	Decimal    string         `toml:"decimal"`
 	Grouping   string         `toml:"grouping"`
