@@ -76,6 +76,7 @@ type Event struct {
 	Acknowledged *Acknowledged `json:"acknowledged,omitempty"`
 	Watching     *Watching     `json:"watching,omitempty"`
 	Withdrawn    *Withdrawn    `json:"withdrawn,omitempty"`
+	Decided      *Decided      `json:"decided,omitempty"`
 }
 
 // Started says that a program began to watch.
@@ -113,6 +114,8 @@ type Batch struct {
 
 	// Replaces are batches that this one takes the place of: they are withdrawn with it.
 	Replaces []uint64 `json:"replaces,omitempty"`
+	// Decided is the decision by which what was held is counted after all; nil of all others.
+	Decided *Decided `json:"decided,omitempty"`
 }
 
 // Rows say where each counted row stands and what it is about; the slices are of one
@@ -196,6 +199,17 @@ type Withdrawn struct {
 	Reason  string    `json:"reason"`
 	By      string    `json:"by"`
 	How     string    `json:"how"` // how By was established
+}
+
+// Decided is a person's decision on something held. One to take it is part of the batch that it
+// brings, so that both are one record; one to set it aside for good is an event of its own.
+type Decided struct {
+	Held   uint64 `json:"held"`            // the event that held it
+	Lines  []int  `json:"lines,omitempty"` // rows of a file that was counted, ascending; none: a file held whole
+	Take   bool   `json:"take"`
+	Reason string `json:"reason"`
+	By     string `json:"by"`
+	How    string `json:"how"` // how By was established
 }
 
 // AlarmState is the state a rule is in, in the words of ISA-18.2 / IEC 62682.

@@ -24,6 +24,7 @@ type State struct {
 	alarms    map[string]*alarm // rule name to its alarm
 	counters  counters
 	withdrawn map[uint64]bool     // batches that no longer count, by their index
+	decided   map[uint64][]int    // lines of held rows that were decided on, by the event that held them; 0 of a file
 	recalls   map[string][]recall // of each process, the older first
 	history   History             // the journal before the event that is being applied
 	every     int64               // batches of a process between two recalls of it
@@ -74,6 +75,7 @@ func NewState() *State {
 		processes: map[string]*process{},
 		alarms:    map[string]*alarm{},
 		withdrawn: map[uint64]bool{},
+		decided:   map[uint64][]int{},
 		recalls:   map[string][]recall{},
 		every:     recallEvery,
 		touched:   map[string]bool{},
@@ -85,6 +87,7 @@ const (
 	planPiece      = "plan"
 	countersPiece  = "counters"
 	withdrawnPiece = "withdrawn"
+	decidedPiece   = "decided"
 	processPiece   = "process/"
 	recallPiece    = "recall/"
 	rulePiece      = "rule/"
@@ -109,6 +112,8 @@ func (s *State) Pieces() (map[string][]byte, error) {
 			part = p
 		case name == withdrawnPiece:
 			part = slices.Sorted(maps.Keys(s.withdrawn))
+		case name == decidedPiece:
+			part = s.decided
 		case strings.HasPrefix(name, recallPiece):
 			part = s.recalls[strings.TrimPrefix(name, recallPiece)]
 		default:
@@ -167,6 +172,8 @@ func (s *State) restore(name string, text []byte) error {
 			s.withdrawn[index] = true
 		}
 		return nil
+	case name == decidedPiece:
+		return json.Unmarshal(text, &s.decided)
 	case strings.HasPrefix(name, recallPiece):
 		var list []recall
 		s.recalls[strings.TrimPrefix(name, recallPiece)] = nil
@@ -223,6 +230,8 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 		return s.applySegment(e)
 	case e.Withdrawn != nil:
 		return s.applyWithdrawn(e)
+	case e.Decided != nil:
+		return Outcomes{}, s.decide(e, e.Decided)
 	case e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
 		return Outcomes{}, nil
 	}
@@ -244,11 +253,20 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 		}
 	}
 	due := map[string]bool{}
+	decision := e.Batch.Decided
+	if decision != nil {
+		if err := s.checkDecision(e, decision); err != nil {
+			return Outcomes{}, err
+		}
+	}
 	if len(e.Batch.Replaces) > 0 {
 		var err error
 		if due, err = s.withdraw(e, e.Batch.Replaces); err != nil {
 			return Outcomes{}, err
 		}
+	}
+	if decision != nil {
+		s.note(decision)
 	}
 	for _, series := range e.Batch.Series {
 		name := series.Process

@@ -67,3 +67,30 @@ func TestRecordVersions(t *testing.T) {
 		}
 	}
 }
+
+func TestWhatWaits(t *testing.T) {
+	s, err := Open(t.TempDir(), Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer s.Close()
+	for i, c := range []struct {
+		event rules.Event
+		want  []Waiting
+	}{
+		{rules.Event{Held: &rules.Held{}}, []Waiting{{0, 0}}},
+		{rules.Event{Batch: &rules.Batch{}}, []Waiting{{0, 0}}},
+		{rules.Event{Batch: &rules.Batch{Held: make([]rules.HeldRow, 3)}}, []Waiting{{0, 0}, {2, 3}}},
+		{rules.Event{Decided: &rules.Decided{Held: 2, Lines: []int{5, 7}}}, []Waiting{{0, 0}, {2, 1}}},
+		{rules.Event{Batch: &rules.Batch{Decided: &rules.Decided{Held: 0}, Held: make([]rules.HeldRow, 1)}}, []Waiting{{2, 1}, {4, 1}}},
+		{rules.Event{Batch: &rules.Batch{Decided: &rules.Decided{Held: 2, Lines: []int{9}}}}, []Waiting{{4, 1}}},
+	} {
+		c.event.Index, c.event.At = uint64(i), time.Unix(1e9, 0)
+		if err := s.Commit(Step{Entries: []Entry{{Event: c.event}}}); err != nil {
+			t.Fatal(err)
+		}
+		if got, err := s.Waiting(); err != nil || !slices.Equal(got, c.want) {
+			t.Errorf("after %d: %v, %v, want %v", i, got, err, c.want)
+		}
+	}
+}

@@ -18,6 +18,8 @@
 //	files    source 0 file            → FileMemory (files.go)
 //	contents SHA-256                  → index of the batch that took it last, source 0 file
 //	batches  source 0 file 0 index    → nothing: the records that counted a batch
+//	held     index                    → how many of its rows wait for a decision (uvarint); 0
+//	                                    where it is a file held whole (held.go)
 //	outbox   feed 0 number            → Message as JSON
 //
 // Beside the store lie the stamp (stamp.go) and, named by the origin, the key that checkpoints
@@ -73,9 +75,10 @@ var (
 	treeBucket     = []byte("tree")
 	originsBucket  = []byte("origins")
 	batchesBucket  = []byte("batches")
+	heldBucket     = []byte("held")
 
 	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
-		treeBucket, originsBucket, batchesBucket}
+		treeBucket, originsBucket, batchesBucket, heldBucket}
 
 	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
@@ -379,7 +382,7 @@ func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 	if err := tx.Bucket(timesBucket).Put(append(number(uint64(e.Event.At.UnixNano())), index...), nil); err != nil {
 		return err
 	}
-	if err := noteBatch(tx, e); err != nil {
+	if err := errors.Join(noteBatch(tx, e), noteHeld(tx, &e.Event)); err != nil {
 		return err
 	}
 	for _, c := range e.Outcomes.Changes {
