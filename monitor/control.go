@@ -28,6 +28,9 @@ type Counter interface {
 	WriteDayLog(day string) (log *daylog.Log, markdown, machine string, err error)
 	Withdraw(w Withdrawal) (*Withdrawn, error)
 	Mark(m Mark) (*Marked, error)
+	Held() ([]HeldItem, error)
+	ShowHeld(ref HeldRef) ([]HeldItem, error)
+	Decide(q Decision) (*HeldDecided, error)
 	Close() error
 }
 

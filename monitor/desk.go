@@ -42,6 +42,8 @@ type Desk struct {
 	now   func() time.Time
 	store *store.Store
 
+	counts sync.Mutex // held from looking at what was counted until what follows is committed; before mu
+
 	mu      sync.Mutex // held for one apply and commit, or one copy out of the state
 	state   *rules.State
 	sources map[string]*SourceStatus

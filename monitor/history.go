@@ -13,11 +13,11 @@ type history struct {
 	out    map[uint64]bool
 }
 
-// Events is for rules.History. Batches in out are shown as events that say nothing.
+// Events is for rules.History. Of batches in out only what they held is shown.
 func (h *history) Events(from, to uint64, visit func(*rules.Event) error) error {
 	show := func(e *rules.Event) error {
-		if h.out[e.Index] {
-			e = &rules.Event{Index: e.Index, At: e.At}
+		if h.out[e.Index] && e.Batch != nil {
+			e = &rules.Event{Index: e.Index, At: e.At, Batch: &rules.Batch{Source: e.Batch.Source, File: e.Batch.File, Held: e.Batch.Held}}
 		}
 		return visit(e)
 	}

@@ -82,16 +82,6 @@ func (d *Desk) takeMarks(a *intake.Arrival, known *knownFiles) error {
 	return nil
 }
 
-// takeMarksOf is takeMarks for what the writer is given.
-func (d *Desk) takeMarksOf(list []intake.Arrival, known *knownFiles) error {
-	for i := range list {
-		if err := d.takeMarks(&list[i], known); err != nil {
-			return err
-		}
-	}
-	return nil
-}
-
 // readMarks reads the lines of a file of marks. What can't be taken goes to held.
 func (d *Desk) readMarks(a *intake.Arrival, held *rules.Held) (list []happening) {
 	at := d.now().UTC()

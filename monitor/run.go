@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"context"
+	"encoding/hex"
 	"errors"
 	"fmt"
 	"iter"
@@ -158,15 +159,21 @@ func (d *Desk) write(ctx context.Context, arrivals <-chan intake.Arrival, known 
 			list = gather(a, arrivals)
 		}
 		for part := range apart(list) {
-			take := d.take
-			if part[0].Source == config.MarksName && part[0].File != "" {
-				take = d.takeMarksOf
-			}
-			if err := take(part, known); err != nil {
+			if err := d.takePart(part, known); err != nil {
 				return err
 			}
 		}
 	}
+}
+
+// takePart commits what can be committed together.
+func (d *Desk) takePart(part []intake.Arrival, known *knownFiles) error {
+	d.counts.Lock()
+	defer d.counts.Unlock()
+	if part[0].Source == config.MarksName && part[0].File != "" {
+		return d.takeMarks(&part[0], known)
+	}
+	return d.take(part, known)
 }
 
 // apart cuts what arrived into parts that can each be committed together: no file name stands
@@ -262,15 +269,15 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 		return happening{}, err
 	}
 	memory.Counted = old.Counted
-	if a.Reading.Batch == nil {
-		return d.hold(a, a.Reading.Held, memory)
-	}
 	index, source, file, found, err := d.store.Taken(a.Reading.SHA256)
 	if err != nil {
 		return happening{}, err
 	}
 	name := source + " " + file
 	withdrawn := found && d.isWithdrawn(index)
+	if a.Reading.Batch == nil && (!found || withdrawn) {
+		return d.hold(a, a.Reading.Held, memory)
+	}
 	if !found {
 		name, found = fresh[a.Reading.SHA256]
 		index = d.store.Next()
@@ -282,7 +289,7 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 			"`steelyard held` takes it after all", a.File, index, name)
 		return d.hold(a, heldOf(a, reason), memory)
 	case found && !withdrawn:
-		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: a.Reading.Batch.SHA256, First: index, Name: name}}
+		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: hex.EncodeToString(a.Reading.SHA256[:]), First: index, Name: name}}
 		memory.Counted = true
 		return happening{e, []store.FileMemory{memory}}, nil
 	}
@@ -293,6 +300,12 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 		}
 		if reason != "" {
 			return d.hold(a, heldOf(a, reason), memory)
+		}
+	}
+	if len(a.Reading.Batch.Held) > 0 && a.Content != nil {
+		// A person may take its rows after all.
+		if _, err := intake.Keep(d.heldFolder(), a.Reading.SHA256, a.Content); err != nil {
+			return happening{}, fmt.Errorf("%w: %w", store.ErrStorage, err)
 		}
 	}
 	memory.Counted, memory.Batch = true, true
@@ -342,6 +355,8 @@ func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
 		s := note(e.Again.Source, e.Again.File)
 		s.Again++
 		d.log.Info().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Again.File).Msg("not counted: the same content was taken before as " + e.Again.Name)
+	case e.Decided != nil:
+		d.log.Info().Uint64("record", e.Index).Uint64("held", e.Decided.Held).Str("by", e.Decided.By).Msg("set aside: " + e.Decided.Reason)
 	case e.Segment != nil:
 		d.log.Info().Uint64("record", e.Index).Strs("processes", e.Segment.Processes).Str("by", e.Segment.By).Msg("a new segment: " + e.Segment.Note)
 	case e.Withdrawn != nil:

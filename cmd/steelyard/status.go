@@ -77,6 +77,9 @@ func printStatus(w io.Writer, st *monitor.Status, zone *time.Location) error {
 	if err := t.Flush(); err != nil {
 		return err
 	}
+	if h := st.Waiting; h.Files+h.Rows > 0 {
+		fmt.Fprintf(w, "\nHeld, and waiting for a decision: files %d, rows of others %d. steelyard held lists them.\n", h.Files, h.Rows)
+	}
 	_, err := fmt.Fprintln(w, "\n"+st.Caution)
 	return err
 }

@@ -61,6 +61,8 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 		c.adopted(e)
 	case e.Withdrawn != nil:
 		c.withdrawn(e)
+	case e.Decided != nil:
+		c.decided(e.At, e.Decided)
 	case e.Segment != nil:
 		since := ""
 		if t := e.Segment.Since; !t.IsZero() {
@@ -101,7 +103,12 @@ func (c *Collector) batch(e *rules.Event) {
 		c.remark(e.At, "File %s of %s (record %d) takes the place of %s, which counts no more.", b.File, b.Source, e.Index, records(b.Replaces))
 	}
 	s := c.source(b.Source)
-	s.Files++
+	if b.Decided != nil {
+		c.decided(e.At, b.Decided)
+	}
+	if b.Decided == nil || len(b.Decided.Lines) == 0 {
+		s.Files++
+	}
 	s.Rows += len(b.Rows.Line)
 	for _, series := range b.Series {
 		s.Measurements += len(series.Value)

@@ -36,3 +36,19 @@ func records(indexes []uint64) string {
 	}
 	return "the records " + strings.Join(names[:len(names)-1], ", ") + " and " + names[len(names)-1]
 }
+
+// decided says who decided what on something held, and why.
+func (c *Collector) decided(at time.Time, d *rules.Decided) {
+	what, verb := fmt.Sprintf("the file held in record %d", d.Held), "set aside for good"
+	switch len(d.Lines) {
+	case 0:
+	case 1:
+		what = fmt.Sprintf("line %d, held in record %d", d.Lines[0], d.Held)
+	default:
+		what = fmt.Sprintf("%d rows held in record %d, the first of line %d", len(d.Lines), d.Held, d.Lines[0])
+	}
+	if d.Take {
+		verb = "taken after all"
+	}
+	c.remark(at, "%s (%s) decided on %s: %s. Reason: %s.", d.By, d.How, what, verb, strings.TrimSuffix(d.Reason, "."))
+}
