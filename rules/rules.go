@@ -44,6 +44,7 @@ type Characteristic struct {
 	Upper    *float64           `json:"upper,omitempty"`
 	Prior    posterior.Prior    `json:"prior"`
 	Remember posterior.Remember `json:"remember"`
+	Retests  Retests            `json:"retests,omitzero"`
 }
 
 // Rule is a claim with its two thresholds, the least evidence, a priority, and who is told.

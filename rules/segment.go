@@ -4,6 +4,8 @@ import (
 	"errors"
 	"fmt"
 	"time"
+
+	"steelyard/rules/posterior"
 )
 
 func (s *State) applySegment(e *Event) (Outcomes, error) {
@@ -25,6 +27,7 @@ func (s *State) applySegment(e *Event) (Outcomes, error) {
 	for name, p := range fresh {
 		s.processes[name] = p
 		s.touched[processPiece+name] = true
+		s.testsChanged(name, nil, p.tests != nil)
 		due[name] = true
 	}
 	for _, r := range s.ready {
@@ -54,6 +57,10 @@ func (s *State) CheckSegment(e *Event) error {
 		if _, _, ok := s.plan.split(name); !ok {
 			return fmt.Errorf("there is no process %q in the plan", name)
 		}
+		if s.processes[name].tests != nil && !since.IsZero() {
+			return fmt.Errorf("in %s %s, so a segment of it can only start with what arrives from now on: leave the time out",
+				name, s.processes[name].Retests.Says())
+		}
 		if p := s.processes[name]; !since.IsZero() && since.Before(p.SegmentSince) {
 			return fmt.Errorf("a segment of %s can't start at %s: the one that it would end began later, at %s",
 				name, since.Format(time.RFC3339), p.SegmentSince.Format(time.RFC3339))
@@ -70,6 +77,9 @@ func (p *process) startSegment(e *Event, name string, h History, out func(index 
 	p.Segment++
 	p.Began, p.SegmentNote = e.Index, e.Segment.Note
 	p.SegmentSince, p.SegmentFrom = e.At, e.Segment.Since
+	if p.tests != nil {
+		p.tests.base = posterior.NewMemory(p.Family, p.Remember)
+	}
 	if p.SegmentFrom.IsZero() {
 		return nil
 	}

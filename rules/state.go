@@ -37,6 +37,7 @@ type State struct {
 type process struct {
 	Family       posterior.Family   `json:"family"`
 	Remember     posterior.Remember `json:"remember"`
+	Retests      Retests            `json:"retests,omitzero"`
 	Taken        int64              `json:"taken"`   // measurements since the store began
 	Batches      int64              `json:"batches"` // that they came in
 	Segment      int                `json:"segment"` // number of the segment, counted from 0
@@ -49,6 +50,7 @@ type process struct {
 	Memory       []byte             `json:"memory"`
 
 	memory *posterior.Memory
+	tests  *tests // nil where no serial is known
 }
 
 // alarm is what the engine knows of one rule.
@@ -100,6 +102,13 @@ func (s *State) Pieces() (map[string][]byte, error) {
 	for name := range s.touched {
 		var part any
 		switch {
+		case strings.HasPrefix(name, testsPiece), strings.HasPrefix(name, basePiece):
+			text, err := s.testsOf(name)
+			if err != nil {
+				return nil, fmt.Errorf("state of %s: %w", name, err)
+			}
+			pieces[name] = text
+			continue
 		case name == planPiece:
 			part = &s.plan
 		case name == countersPiece:
@@ -142,6 +151,9 @@ func Restore(pieces map[string][]byte) (*State, error) {
 			return nil, fmt.Errorf("saved state %q: %w", name, err)
 		}
 	}
+	if err := s.restoreTests(pieces); err != nil {
+		return nil, err
+	}
 	ready, err := s.plan.compile()
 	if err != nil {
 		return nil, fmt.Errorf("saved plan: %w", err)
@@ -172,6 +184,8 @@ func (s *State) restore(name string, text []byte) error {
 			s.withdrawn[index] = true
 		}
 		return nil
+	case strings.HasPrefix(name, testsPiece), strings.HasPrefix(name, basePiece):
+		return nil // restoreTests
 	case name == decidedPiece:
 		return json.Unmarshal(text, &s.decided)
 	case strings.HasPrefix(name, recallPiece):
@@ -239,7 +253,11 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 }
 
 func (s *State) applyBatch(e *Event) (Outcomes, error) {
-	for _, series := range e.Batch.Series {
+	for k, series := range e.Batch.Series {
+		if slices.ContainsFunc(e.Batch.Series[:k], func(other Series) bool { return other.Process == series.Process }) {
+			return Outcomes{}, fmt.Errorf("source %s, file %s: the batch has two series of %s; one of each process is expected",
+				e.Batch.Source, e.Batch.File, series.Process)
+		}
 		p, ok := s.processes[series.Process]
 		if _, _, planned := s.plan.split(series.Process); !ok || !planned {
 			return Outcomes{}, fmt.Errorf("source %s, file %s: there is no process %q in the plan",
@@ -305,17 +323,14 @@ func (s *Series) of(i int) float64 {
 // take adds a series to what its process remembers.
 func (s *State) take(e *Event, series *Series, out *Outcomes) {
 	p := s.processes[series.Process]
-	if before := p.take(e, series); before > 0 {
-		out.Remarks = append(out.Remarks, fmt.Sprintf(
-			"%s: %d of %d measurements of file %s of %s were made before its segment began (%s) and do not count in it",
-			series.Process, before, len(series.Value), e.Batch.File, e.Batch.Source, p.SegmentFrom.Format(time.RFC3339)))
-	}
+	n := p.take(e, series)
+	out.Remarks = append(out.Remarks, n.remarks(p, e, series)...)
 	s.touched[processPiece+series.Process] = true
+	s.testsChanged(series.Process, n.changed, n.settled)
 }
 
-// take adds a series to what the process knows, and says how many of its measurements were made
-// before the segment.
-func (p *process) take(e *Event, series *Series) (before int) {
+// take adds a series to what the process knows, and says what became of it.
+func (p *process) take(e *Event, series *Series) (n tally) {
 	times := timesOf(e, series)
 	p.Taken += int64(len(times))
 	p.Batches++
@@ -325,7 +340,11 @@ func (p *process) take(e *Event, series *Series) (before int) {
 			p.LastMeasured = last
 		}
 	}
-	return p.remember(e, series, times)
+	if p.tests != nil {
+		return p.test(e, series, times)
+	}
+	n.before = p.remember(e, series, times)
+	return n
 }
 
 // timesOf are the times at which a series was measured; that of the event where the source has none.
@@ -349,14 +368,7 @@ func (p *process) remember(e *Event, series *Series, times []int64) (before int)
 			return before
 		}
 	}
-	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
-	// measurement is no later than its arrival.
-	now := e.At.UnixNano()
-	within := make([]int64, len(times))
-	for i, t := range times {
-		within[i] = min(t, now)
-	}
-	p.memory.AddBatch(values, of, within)
+	p.memory.AddBatch(values, of, notLater(times, e.At))
 	return before
 }
 
@@ -420,10 +432,12 @@ func (s *State) fitProcesses(e *Event, out *Outcomes) {
 			}
 			if old != nil {
 				out.Remarks = append(out.Remarks, fmt.Sprintf(
-					"%s: its family or what it remembers has changed, so its evidence starts anew", name))
+					"%s: its family, what it remembers or which test of a serial counts has changed, so its evidence starts anew", name))
 			}
+			gone := old.allTests()
 			s.processes[name] = p
 			s.touched[processPiece+name] = true
+			s.testsChanged(name, gone, true)
 		}
 	}
 }
@@ -431,11 +445,11 @@ func (s *State) fitProcesses(e *Event, out *Outcomes) {
 // fitted is the process as a characteristic now wants it: itself where it fits, else one that
 // starts anew with the event. There may have been none before.
 func fitted(old *process, c *Characteristic, event uint64) *process {
-	if old != nil && old.Family == c.Family && old.Remember == c.Remember {
+	if old != nil && old.Family == c.Family && old.Remember == c.Remember && old.Retests == c.Retests {
 		return old
 	}
-	p := &process{Family: c.Family, Remember: c.Remember, Began: event}
-	p.memory = posterior.NewMemory(c.Family, c.Remember)
+	p := &process{Family: c.Family, Remember: c.Remember, Retests: c.Retests, Began: event}
+	p.memory, p.tests = posterior.NewMemory(c.Family, c.Remember), newTests(p)
 	if old != nil {
 		p.Taken, p.Batches, p.Segment = old.Taken, old.Batches, old.Segment+1
 		p.LastMeasured, p.LastTaken = old.LastMeasured, old.LastTaken

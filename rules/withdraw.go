@@ -58,8 +58,10 @@ func (s *State) withdraw(e *Event, batches []uint64) (map[string]bool, error) {
 	concerned := map[string]bool{}
 	for name := range first {
 		concerned[name] = true
+		gone := s.processes[name].allTests()
 		s.processes[name], s.recalls[name] = r.processes[name], r.recalls[name]
 		s.touched[processPiece+name], s.touched[recallPiece+name] = true, true
+		s.testsChanged(name, append(gone, s.processes[name].allTests()...), s.processes[name].tests != nil)
 	}
 	return concerned, nil
 }
@@ -146,6 +148,9 @@ func (r *rebuilding) begin(name string, before uint64) error {
 	if err == nil {
 		err = p.read()
 	}
+	if err == nil && at.Tests != nil {
+		p.tests, err = at.Tests.read(p)
+	}
 	if err != nil {
 		return fmt.Errorf("state of %s as it was before record %d: %w", name, at.Index, err)
 	}
@@ -204,6 +209,7 @@ func (r *rebuilding) concerns(name string, old *Event) bool {
 type recall struct {
 	Index   uint64          `json:"index"`
 	Process json.RawMessage `json:"process"`
+	Tests   *tests          `json:"tests,omitempty"`
 }
 
 // recallEvery is how many batches of a process lie between two recalls of it, and mostRecalls
@@ -225,7 +231,26 @@ func (s *State) remind(name string, list []recall, p *process, e *Event) []recal
 	if err != nil {
 		return list
 	}
-	list = append(slices.Clone(list), recall{e.Index, text})
+	known, err := p.tests.copied()
+	if err != nil {
+		return list
+	}
+	list = append(slices.Clone(list), recall{e.Index, text, known})
 	s.touched[recallPiece+name] = true
 	return list[max(0, len(list)-mostRecalls):]
+}
+
+// copied are tests as they are now, to be kept; nil where there are none.
+func (t *tests) copied() (c *tests, err error) {
+	if t == nil {
+		return nil, nil
+	}
+	c = &tests{}
+	for _, b := range t.Batches {
+		own := *b
+		own.Out = slices.Clone(b.Out)
+		c.Batches = append(c.Batches, &own)
+	}
+	c.Base, err = t.base.AppendBinary(nil)
+	return c, err
 }

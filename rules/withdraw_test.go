@@ -2,7 +2,10 @@ package rules
 
 import (
 	"bytes"
+	"encoding/json"
+	"errors"
 	"fmt"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -150,10 +153,14 @@ func TestWithdrawalRefused(t *testing.T) {
 func remembering() Plan {
 	reference := posterior.Prior{Reference: true}
 	plan := Plan{Site: "Tessmoor Pumpworks"}
-	for i, r := range []posterior.Remember{{Segment: true}, {Units: 70}, {Hours: 0.02}, {Discount: 0.9}} {
-		name := fmt.Sprintf("c%d", i)
+	ways := []posterior.Remember{{Segment: true}, {Units: 70}, {Hours: 0.02}, {Discount: 0.9}}
+	for i, tests := range []Retests{
+		{}, {}, {}, {}, {Count: FirstTest, Units: 60}, {Count: LastTest, Units: 60}, {Count: LastTest, Days: 0.001}, {Count: LastTest, Units: 50},
+		{Count: LastTest, Units: 1}, {Count: FirstTest, Days: 0.002}, {Count: EveryTest, Units: 90},
+	} {
+		name, r := fmt.Sprintf("c%d", i), ways[i%len(ways)]
 		plan.Characteristics = append(plan.Characteristics, Characteristic{
-			Name: name, Family: posterior.NormalFamily, Lines: []string{"A", "B"}, Prior: reference, Remember: r,
+			Name: name, Family: posterior.NormalFamily, Lines: []string{"A", "B"}, Prior: reference, Remember: r, Retests: tests,
 		})
 		plan.Rules = append(plan.Rules, Rule{
 			Name: name, Claim: fmt.Sprintf("mean(%s.A) - mean(%s.B) > 0.1", name, name), Raise: 0.9, Clear: 0.5, LeastUnits: 3, Priority: "low",
@@ -176,10 +183,14 @@ func (p *plant) batch() Event {
 	for range rapid.IntRange(1, 3).Draw(p.t, "series") {
 		c := rapid.SampledFrom(p.plan.Characteristics).Draw(p.t, "characteristic")
 		s := Series{Process: ProcessName(c.Name, rapid.SampledFrom(c.Lines).Draw(p.t, "line"))}
+		if slices.ContainsFunc(b.Series, func(other Series) bool { return other.Process == s.Process }) {
+			continue
+		}
 		for range rapid.IntRange(1, 40).Draw(p.t, "units") {
 			s.Row = append(s.Row, len(b.Rows.Line))
 			s.Value = append(s.Value, rapid.Float64Range(-5, 5).Draw(p.t, "value"))
 			b.Rows.Line = append(b.Rows.Line, len(b.Rows.Line)+2)
+			b.Rows.Serial = append(b.Rows.Serial, rapid.SampledFrom(someSerials).Draw(p.t, "serial"))
 			late := time.Duration(rapid.IntRange(-20, 200).Draw(p.t, "late")) * time.Second
 			b.Rows.Time = append(b.Rows.Time, p.clock.Add(-late).UnixNano())
 		}
@@ -187,6 +198,14 @@ func (p *plant) batch() Event {
 	}
 	return Event{Batch: b}
 }
+
+// someSerials come again and again; one unit has none.
+var someSerials = func() (list []string) {
+	for i := range 100 {
+		list = append(list, fmt.Sprint("s", i))
+	}
+	return append(list, "")
+}()
 
 // some draws batches that count now, in ascending order, and lets them count no more.
 func (p *plant) some() (taken []uint64) {
@@ -210,7 +229,7 @@ func (p *plant) some() (taken []uint64) {
 func (p *plant) segment(live *State) Event {
 	name := rapid.SampledFrom(p.plan.Processes()).Draw(p.t, "process")
 	seg := &Segment{Processes: []string{name}, Note: "new insert"}
-	if rapid.Bool().Draw(p.t, "past") {
+	if live.processes[name].tests == nil && rapid.Bool().Draw(p.t, "past") {
 		seg.Since = p.clock.Add(-time.Duration(rapid.IntRange(0, 300).Draw(p.t, "ago")) * time.Second)
 		if began := live.processes[name].SegmentSince; seg.Since.Before(began) {
 			seg.Since = began
@@ -325,6 +344,19 @@ func same(t *rapid.T, name string, got, want *process, now time.Time) {
 	if got.Taken != want.Taken || got.Batches != want.Batches || got.Segment != want.Segment ||
 		!got.SegmentSince.Equal(want.SegmentSince) || !got.LastMeasured.Equal(want.LastMeasured) || !got.LastTaken.Equal(want.LastTaken) {
 		t.Errorf("%s: %+v, want %+v", name, got, want)
+	}
+	if want.tests == nil {
+		return
+	}
+	for _, p := range []*process{got, want} {
+		p.tests.base.Pass(now.UnixNano())
+	}
+	g, err1 := got.tests.copied()
+	w, err2 := want.tests.copied()
+	gText, err3 := json.Marshal(g)
+	wText, err4 := json.Marshal(w)
+	if err := errors.Join(err1, err2, err3, err4); err != nil || !bytes.Equal(gText, wText) || got.tests.units != want.tests.units {
+		t.Errorf("%s: tests %s, want %s, %v", name, gText, wText, err)
 	}
 }
 

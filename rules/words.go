@@ -3,6 +3,7 @@ package rules
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -335,7 +336,24 @@ func (p *Plan) how(c *Change) string {
 	if c.Quantity != nil {
 		text += "; " + p.QuantityText(c.Rule, *c.Quantity)
 	}
+	for _, says := range p.tests(c) {
+		text += "; " + says
+	}
 	return text
+}
+
+// tests says which test of a serial counts in the numbers of a change.
+func (p *Plan) tests(c *Change) (says []string) {
+	for _, u := range c.Units {
+		ch, _, ok := p.split(u.Process)
+		if !ok {
+			continue
+		}
+		if text := ch.Retests.Says(); text != "" && !slices.Contains(says, text) {
+			says = append(says, text)
+		}
+	}
+	return says
 }
 
 // list joins parts as a sentence does.

@@ -5,6 +5,7 @@ import (
 	"encoding/binary"
 	"encoding/json"
 	"fmt"
+	"slices"
 	"time"
 
 	"steelyard/rules"
@@ -14,7 +15,8 @@ import (
 // hashed, copied or proved later is these bytes, never a second encoding.
 //
 //	version  1 byte: 2, or 3 where it says what programs of version 2 do not know: a withdrawal, a
-//	         batch that replaces others, a decision on what was held, a segment from a moment on
+//	         batch that replaces others, a decision on what was held, a segment from a moment on, a plan
+//	         that says which test of a serial counts
 //	head     its length (uvarint), then a JSON array of two objects, the event and the
 //	         outcomes, with the names of package rules, but without what follows here; floats
 //	         in the shortest form that reads back to the same bits, times in RFC 3339, UTC
@@ -36,7 +38,10 @@ const (
 
 // versionOf is the least version that says all that the event does.
 func versionOf(e *rules.Event) byte {
+	knowsSerials := func(c rules.Characteristic) bool { return c.Retests != rules.Retests{} }
 	switch {
+	case e.Adopted != nil && slices.ContainsFunc(e.Adopted.Plan.Characteristics, knowsSerials):
+		return correctedVersion
 	case e.Withdrawn != nil, e.Decided != nil, e.Batch != nil && e.Batch.Decided != nil, e.Batch != nil && len(e.Batch.Replaces) > 0, e.Segment != nil && !e.Segment.Since.IsZero():
 		return correctedVersion
 	}
