@@ -44,6 +44,7 @@ type PriorInForce struct {
 	Family         posterior.Family   `json:"family"`
 	Prior          posterior.Prior    `json:"prior"`
 	Remember       posterior.Remember `json:"remember"`
+	Tests          string             `json:"tests,omitempty"` // which test of a serial counts
 }
 
 // AdoptedAs says which configuration was in force.
@@ -255,7 +256,7 @@ func (x *explainer) cross(e rules.Event, out rules.Outcomes) error {
 	}
 	for _, ch := range plan.Characteristics {
 		if slices.ContainsFunc(x.processes, func(p string) bool { return strings.HasPrefix(p, ch.Name+".") }) {
-			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember})
+			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember, ch.Retests.Says()})
 		}
 	}
 	if l, ok := x.lookIn(&e, &out); ok {

@@ -14,7 +14,8 @@
 //	                                    leaf first, 32 bytes each (package ledger)
 //	times    at (ns since 1970), index → nothing: the first record at or after a moment
 //	alarms   alarm number, index      → nothing: the records that changed an alarm
-//	state    name of a piece          → the piece, as the engine encoded it
+//	state    name of a piece          → the piece, as the engine encoded it; a large one in a bucket
+//	                                    of that name, under "piece" (pieces.go)
 //	files    source 0 file            → FileMemory (files.go)
 //	contents SHA-256                  → index of the batch that took it last, source 0 file
 //	batches  source 0 file 0 index    → nothing: the records that counted a batch
@@ -338,13 +339,8 @@ func (s *Store) write(tx *bolt.Tx, step *Step) error {
 	if err := s.noteSigned(tx); err != nil {
 		return err
 	}
-	state := tx.Bucket(stateBucket)
 	for name, piece := range step.Pieces {
-		if piece == nil {
-			if err := state.Delete([]byte(name)); err != nil {
-				return err
-			}
-		} else if err := state.Put([]byte(name), piece); err != nil {
+		if err := putPiece(tx, []byte(name), piece); err != nil {
 			return err
 		}
 	}
@@ -399,18 +395,6 @@ func number(n uint64) []byte { return binary.BigEndian.AppendUint64(nil, n) }
 // joined is a composite key.
 func joined(name string, rest []byte) []byte {
 	return append(append([]byte(name), 0), rest...)
-}
-
-// Pieces are the pieces of the engine's state.
-func (s *Store) Pieces() (map[string][]byte, error) {
-	pieces := map[string][]byte{}
-	err := s.view("read the state", func(tx *bolt.Tx) error {
-		return tx.Bucket(stateBucket).ForEach(func(k, v []byte) error {
-			pieces[string(k)] = bytes.Clone(v)
-			return nil
-		})
-	})
-	return pieces, err
 }
 
 func (s *Store) view(what string, read func(*bolt.Tx) error) error {

@@ -381,6 +381,9 @@ func (m *model) step(t *rapid.T, s *Store) (st Step) {
 			st.Pieces[name] = nil
 			delete(m.pieces, name)
 		} else {
+			if rapid.Bool().Draw(t, "large") {
+				piece = strings.Repeat(piece, 1+largePiece/len(piece))
+			}
 			st.Pieces[name], m.pieces[name] = []byte(piece), piece
 		}
 	}

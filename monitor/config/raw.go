@@ -39,6 +39,8 @@ type rawCharacteristic struct {
 	Plausible rawLimits `toml:"plausible"`
 	Remember  any       `toml:"remember"`
 	Prior     any       `toml:"prior"`
+	Retests   string    `toml:"retests"`
+	Serials   any       `toml:"serials"`
 }
 
 type rawLimits struct {
