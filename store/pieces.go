@@ -18,7 +18,7 @@ var largeKey = []byte("piece")
 func putPiece(tx *bolt.Tx, name, piece []byte) error {
 	state := tx.Bucket(stateBucket)
 	own := state.Bucket(name)
-	if piece != nil && len(piece) >= largePiece {
+	if len(piece) >= largePiece {
 		if own == nil {
 			if err := state.Delete(name); err != nil {
 				return err
