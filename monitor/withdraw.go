@@ -144,7 +144,7 @@ func (d *Desk) toWithdraw(w *Withdrawal) (list []WithdrawnBatch, err error) {
 		}
 		switch {
 		case e.Batch == nil:
-			return nil, fmt.Errorf("record %d counted no batch; explain and the day log name the records of batches", index)
+			return nil, fmt.Errorf("record %d counted no batch; explain and the log of the daemon name the records of batches", index)
 		case d.isWithdrawn(index):
 			return nil, fmt.Errorf("the batch of record %d (%s of %s) was withdrawn before", index, e.Batch.File, e.Batch.Source)
 		}

@@ -11,7 +11,7 @@ import (
 )
 
 type withdrawVerb struct {
-	Batches []uint64 `arg:"" optional:"" help:"Records that counted the batches: 12. Explain and the day log name them."`
+	Batches []uint64 `arg:"" optional:"" help:"Records that counted the batches: 12. Explain and the log of the daemon name them."`
 	Source  string   `help:"Every batch of this source, with --from and --to." placeholder:"NAME"`
 	From    string   `help:"That has a measurement made at or after this time." placeholder:"TIME"`
 	To      string   `help:"And before this one." placeholder:"TIME"`
