@@ -26,6 +26,11 @@ type Counter interface {
 	Explain(alarm int) (*Explanation, error)
 	Acknowledge(alarm int, by, how, note string) (*Answer, error)
 	WriteDayLog(day string) (log *daylog.Log, markdown, machine string, err error)
+	Withdraw(w Withdrawal) (*Withdrawn, error)
+	Mark(m Mark) (*Marked, error)
+	Held() ([]HeldItem, error)
+	ShowHeld(ref HeldRef) ([]HeldItem, error)
+	Decide(q Decision) (*HeldDecided, error)
 	Close() error
 }
 
@@ -152,6 +157,7 @@ func (d *Desk) handler() http.Handler {
 			reply(w, writtenLog{log, markdown, machine}, err)
 		}
 	})
+	d.handleCorrections(mux)
 	return mux
 }
 

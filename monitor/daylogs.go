@@ -42,7 +42,7 @@ func (d *Desk) dayLog(day daylog.Day, now time.Time) (*daylog.Log, error) {
 	if err != nil {
 		return nil, err
 	}
-	state := rules.NewState()
+	state := d.replaying()
 	var collector *daylog.Collector
 	err = d.store.Journal(0, to, func(e rules.Event, out rules.Outcomes) error {
 		if e.Index >= from && collector == nil {

@@ -42,9 +42,12 @@ type Desk struct {
 	now   func() time.Time
 	store *store.Store
 
+	counts sync.Mutex // held from looking at what was counted until what follows is committed; before mu
+
 	mu      sync.Mutex // held for one apply and commit, or one copy out of the state
 	state   *rules.State
 	sources map[string]*SourceStatus
+	coming  []store.Entry     // of the commit at hand
 	failed  error             // the first storage error; nothing is committed after it
 	trouble map[string]string // of each feed: why its last delivery failed
 
@@ -74,6 +77,9 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	for _, src := range cfg.Sources {
 		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}
 	}
+	for _, src := range watchMarks(cfg) {
+		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}
+	}
 	for _, f := range cfg.Feeds {
 		d.told[f.Name] = make(chan struct{}, 1)
 	}
@@ -83,6 +89,7 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	if d.state, err = d.restore(); err != nil {
 		return nil, errors.Join(err, s.Close())
 	}
+	d.state.Consult(&history{store: s, coming: &d.coming})
 	return d, nil
 }
 
@@ -120,7 +127,12 @@ func (d *Desk) commit(list []happening) (outcomes []rules.Outcomes, refused []er
 		e := &list[i].event
 		e.Index, e.At = next+uint64(len(step.Entries)), at
 		before := d.state.Plan()
+		d.coming = step.Entries
 		outcomes[i], refused[i] = d.state.Apply(e)
+		if errors.Is(refused[i], store.ErrStorage) {
+			d.failed = refused[i]
+			return nil, nil, d.failed
+		}
 		if refused[i] != nil {
 			continue
 		}

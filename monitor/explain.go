@@ -31,6 +31,11 @@ type Explanation struct {
 	Earlier   int            `json:"earlier_batches"` // of the same evidence, not listed
 	Processes []BeforeAfter  `json:"processes"`
 	Caution   string         `json:"caution"`
+
+	// Withdrawn are batches of the same evidence that were taken out since, and Stands whether
+	// the alarm would have been raised at its record without them; nil where there are none.
+	Withdrawn []WithdrawnSince `json:"withdrawn_since,omitempty"`
+	Stands    *bool            `json:"stands_without,omitempty"`
 }
 
 // PriorInForce is what was believed of a characteristic before its data.
@@ -39,6 +44,7 @@ type PriorInForce struct {
 	Family         posterior.Family   `json:"family"`
 	Prior          posterior.Prior    `json:"prior"`
 	Remember       posterior.Remember `json:"remember"`
+	Tests          string             `json:"tests,omitempty"` // which test of a serial counts
 }
 
 // AdoptedAs says which configuration was in force.
@@ -117,7 +123,8 @@ func (d *Desk) Explain(number int) (*Explanation, error) {
 	if len(records) == 0 {
 		return nil, fmt.Errorf("there is no alarm A%d in the journal", number)
 	}
-	x := &explainer{number: number, zone: d.cfg.Site.Zone, state: rules.NewState()}
+	x := &explainer{number: number, zone: d.cfg.Site.Zone, state: d.replaying(),
+		rests: map[uint64]bool{}, already: map[uint64]bool{}}
 	x.Type, x.Alarm, x.Caution = "explanation", fmt.Sprintf("A%d", number), rules.ReleaseNote
 	crossing, last, end := records[0], records[len(records)-1], d.store.Next()
 	if err := d.store.Journal(crossing, crossing+1, x.findRule); err != nil {
@@ -138,10 +145,11 @@ func (d *Desk) Explain(number int) (*Explanation, error) {
 	if err != nil && !errors.Is(err, errSeenEnough) {
 		return nil, err
 	}
+	if err := d.withdrawnSince(x, end); err != nil {
+		return nil, err
+	}
 	return &x.Explanation, nil
 }
-
-var errSeenEnough = errors.New("seen enough")
 
 // explainer goes through the journal up to and a little past one crossing.
 type explainer struct {
@@ -151,6 +159,9 @@ type explainer struct {
 	state     *rules.State
 	processes []string // of the claim
 	after     int      // looks seen since the crossing
+
+	rests   map[uint64]bool // records of the batches that the claim's processes had taken
+	already map[uint64]bool // and of those withdrawn before the crossing, or with it
 }
 
 // raised is the change that raised the alarm, in the outcomes of the crossing.
@@ -190,6 +201,10 @@ func (x *explainer) before(e rules.Event, out rules.Outcomes) error {
 
 // evidence keeps the configuration in force and the batches that the claim rests on.
 func (x *explainer) evidence(e *rules.Event) {
+	for _, w := range takenOut(e) {
+		x.already[w.Batch] = true
+		x.Batches = slices.DeleteFunc(x.Batches, func(b BatchOf) bool { return b.Record == w.Batch })
+	}
 	switch {
 	case e.Adopted != nil:
 		x.Adopted = AdoptedAs{e.Index, e.At, e.Adopted.File, e.Adopted.Digest, e.Adopted.By}
@@ -204,6 +219,7 @@ func (x *explainer) evidence(e *rules.Event) {
 		if len(b.Values) == 0 {
 			return
 		}
+		x.rests[e.Index] = true
 		x.Batches = append(x.Batches, b)
 		if len(x.Batches) > mostBatches {
 			x.Batches = x.Batches[1:]
@@ -240,7 +256,7 @@ func (x *explainer) cross(e rules.Event, out rules.Outcomes) error {
 	}
 	for _, ch := range plan.Characteristics {
 		if slices.ContainsFunc(x.processes, func(p string) bool { return strings.HasPrefix(p, ch.Name+".") }) {
-			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember})
+			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember, ch.Retests.Says()})
 		}
 	}
 	if l, ok := x.lookIn(&e, &out); ok {

@@ -2,14 +2,17 @@ package monitor
 
 import (
 	"context"
+	"encoding/hex"
 	"errors"
 	"fmt"
+	"iter"
 	"net/http"
 	"os"
 	"path/filepath"
 	"sync"
 	"time"
 
+	"steelyard/monitor/config"
 	"steelyard/monitor/daylog"
 	"steelyard/monitor/feed"
 	"steelyard/monitor/intake"
@@ -55,6 +58,9 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	arrivals := make(chan intake.Arrival, fewWait) // each holds the content of a file
 	for i := range d.cfg.Sources {
 		src := &d.cfg.Sources[i]
+		helpers.Go(func() { intake.Watch(ctx, src, &d.cfg.Plan, known.of(src.Name), arrivals) })
+	}
+	for _, src := range watchMarks(d.cfg) {
 		helpers.Go(func() { intake.Watch(ctx, src, &d.cfg.Plan, known.of(src.Name), arrivals) })
 	}
 	if ready != nil {
@@ -113,12 +119,16 @@ type knownFile struct{ size, written int64 }
 
 func (d *Desk) remembered() (*knownFiles, error) {
 	k := &knownFiles{files: map[string]map[string]knownFile{}}
+	names := []string{config.MarksName}
 	for _, src := range d.cfg.Sources {
+		names = append(names, src.Name)
+	}
+	for _, name := range names {
 		files := map[string]knownFile{}
-		if err := d.store.Files(src.Name, func(f store.FileMemory) { files[f.File] = knownFile{f.Size, f.Written} }); err != nil {
+		if err := d.store.Files(name, func(f store.FileMemory) { files[f.File] = knownFile{f.Size, f.Written} }); err != nil {
 			return nil, err
 		}
-		k.files[src.Name] = files
+		k.files[name] = files
 	}
 	return k, nil
 }
@@ -148,9 +158,45 @@ func (d *Desk) write(ctx context.Context, arrivals <-chan intake.Arrival, known 
 		case a := <-arrivals:
 			list = gather(a, arrivals)
 		}
-		if err := d.take(list, known); err != nil {
-			return err
+		for part := range apart(list) {
+			if err := d.takePart(part, known); err != nil {
+				return err
+			}
 		}
+	}
+}
+
+// takePart commits what can be committed together.
+func (d *Desk) takePart(part []intake.Arrival, known *knownFiles) error {
+	d.counts.Lock()
+	defer d.counts.Unlock()
+	if part[0].Source == config.MarksName && part[0].File != "" {
+		return d.takeMarks(&part[0], known)
+	}
+	return d.take(part, known)
+}
+
+// apart cuts what arrived into parts that can each be committed together: no file name stands
+// twice in one, so that the second is compared with what was committed of the first, and a file
+// of marks stands alone.
+func apart(list []intake.Arrival) iter.Seq[[]intake.Arrival] {
+	return func(yield func([]intake.Arrival) bool) {
+		from := 0
+		names := map[[2]string]bool{}
+		for i := range list {
+			a := &list[i]
+			name := [2]string{a.Source, a.File}
+			isMark := a.Source == config.MarksName && a.File != ""
+			if i > from && (isMark || names[name] && a.File != "" || list[i-1].Source == config.MarksName && list[i-1].File != "") {
+				if !yield(list[from:i]) {
+					return
+				}
+				from = i
+				clear(names)
+			}
+			names[name] = true
+		}
+		yield(list[from:])
 	}
 }
 
@@ -223,27 +269,44 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 		return happening{}, err
 	}
 	memory.Counted = old.Counted
-	if a.Reading.Batch == nil {
-		return d.hold(a, a.Reading.Held, memory)
-	}
 	index, source, file, found, err := d.store.Taken(a.Reading.SHA256)
 	if err != nil {
 		return happening{}, err
 	}
 	name := source + " " + file
+	withdrawn := found && d.isWithdrawn(index)
+	if a.Reading.Batch == nil && (!found || withdrawn) {
+		return d.hold(a, a.Reading.Held, memory)
+	}
 	if !found {
 		name, found = fresh[a.Reading.SHA256]
 		index = d.store.Next()
 	}
-	if found {
-		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: a.Reading.Batch.SHA256, First: index, Name: name}}
+	replaces := d.source(a.Source).Resent == "replace" && old.Counted
+	switch {
+	case withdrawn && !(replaces && source == a.Source && file == a.File):
+		reason := fmt.Sprintf("%s: this content was counted before (record %d, %s) and has been withdrawn since, so it is not counted again; "+
+			"`steelyard held` takes it after all", a.File, index, name)
+		return d.hold(a, heldOf(a, reason), memory)
+	case found && !withdrawn:
+		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: hex.EncodeToString(a.Reading.SHA256[:]), First: index, Name: name}}
 		memory.Counted = true
 		return happening{e, []store.FileMemory{memory}}, nil
 	}
 	if old.Counted {
-		reason := fmt.Sprintf("%s: a file of this name was counted before with other content (record %d), and counting both could count a row twice; "+
-			"drop what is new under a new name", a.File, old.Index)
-		return d.hold(a, heldOf(a, reason), memory)
+		reason, err := d.resent(a)
+		if err != nil {
+			return happening{}, err
+		}
+		if reason != "" {
+			return d.hold(a, heldOf(a, reason), memory)
+		}
+	}
+	if len(a.Reading.Batch.Held) > 0 && a.Content != nil {
+		// A person may take its rows after all.
+		if _, err := intake.Keep(d.heldFolder(), a.Reading.SHA256, a.Content); err != nil {
+			return happening{}, fmt.Errorf("%w: %w", store.ErrStorage, err)
+		}
 	}
 	memory.Counted, memory.Batch = true, true
 	fresh[a.Reading.SHA256] = a.Source + " " + a.File
@@ -253,7 +316,7 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 // hold keeps a copy of what is held and makes the event of it.
 func (d *Desk) hold(a *intake.Arrival, held *rules.Held, memory store.FileMemory) (happening, error) {
 	if a.Content != nil {
-		name, err := intake.Keep(filepath.Join(d.cfg.Site.State, "held"), a.Reading.SHA256, a.Content)
+		name, err := intake.Keep(d.heldFolder(), a.Reading.SHA256, a.Content)
 		if err != nil {
 			return happening{}, fmt.Errorf("%w: %w", store.ErrStorage, err)
 		}
@@ -261,6 +324,9 @@ func (d *Desk) hold(a *intake.Arrival, held *rules.Held, memory store.FileMemory
 	}
 	return happening{rules.Event{Held: held}, []store.FileMemory{memory}}, nil
 }
+
+// heldFolder is where copies of what is held are kept.
+func (d *Desk) heldFolder() string { return filepath.Join(d.cfg.Site.State, "held") }
 
 // report tells the log and the status what was committed.
 func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
@@ -289,6 +355,12 @@ func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
 		s := note(e.Again.Source, e.Again.File)
 		s.Again++
 		d.log.Info().Uint64("record", e.Index).Str("source", s.Name).Str("file", e.Again.File).Msg("not counted: the same content was taken before as " + e.Again.Name)
+	case e.Decided != nil:
+		d.log.Info().Uint64("record", e.Index).Uint64("held", e.Decided.Held).Str("by", e.Decided.By).Msg("set aside: " + e.Decided.Reason)
+	case e.Segment != nil:
+		d.log.Info().Uint64("record", e.Index).Strs("processes", e.Segment.Processes).Str("by", e.Segment.By).Msg("a new segment: " + e.Segment.Note)
+	case e.Withdrawn != nil:
+		d.log.Warn().Uint64("record", e.Index).Uints64("batches", e.Withdrawn.Batches).Str("by", e.Withdrawn.By).Msg("withdrawn: " + e.Withdrawn.Reason)
 	case e.Watching != nil:
 		s := d.sources[e.Watching.Source]
 		s.Able, s.Why = e.Watching.Able, e.Watching.Why

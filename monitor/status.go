@@ -20,6 +20,7 @@ type Status struct {
 	Rules     []rules.RuleStanding `json:"rules"`
 	Processes []rules.Standing     `json:"processes"`
 	Feeds     []FeedStatus         `json:"feeds"`
+	Waiting   HeldStatus           `json:"held"`
 	Caution   string               `json:"caution"`
 }
 
@@ -35,6 +36,12 @@ type SourceStatus struct {
 	LastFile string    `json:"last_file,omitempty"`
 	LastAt   time.Time `json:"last_at,omitzero"`
 	Remark   string    `json:"remark,omitempty"` // the last thing passed over, and why
+}
+
+// HeldStatus is how much that is held waits for a person's decision, since the store began.
+type HeldStatus struct {
+	Files int `json:"files"` // held whole
+	Rows  int `json:"rows"`  // of files that were counted
 }
 
 // FeedStatus is where one feed stands.
@@ -57,6 +64,18 @@ func (d *Desk) Status() (*Status, error) {
 	st.LastAlive, _ = d.store.LastAlive()
 	for _, src := range d.cfg.Sources {
 		st.Sources = append(st.Sources, *d.sources[src.Name])
+	}
+	for _, src := range watchMarks(d.cfg) {
+		st.Sources = append(st.Sources, *d.sources[src.Name])
+	}
+	held, err := d.store.Waiting()
+	if err != nil {
+		return nil, err
+	}
+	for _, w := range held {
+		if st.Waiting.Rows += w.Rows; w.Rows == 0 {
+			st.Waiting.Files++
+		}
 	}
 	for _, f := range d.cfg.Feeds {
 		waiting, err := d.waiting(f.Name)

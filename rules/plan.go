@@ -114,6 +114,9 @@ func (p *Plan) compile() ([]weighed, error) {
 		if err := c.Remember.Check(); err != nil {
 			return nil, fmt.Errorf("characteristic %q: %w", c.Name, err)
 		}
+		if err := c.Retests.Check(); err != nil {
+			return nil, fmt.Errorf("characteristic %q: %w", c.Name, err)
+		}
 	}
 	var ready []weighed
 	seen := map[string]bool{}
@@ -140,18 +143,19 @@ func (p *Plan) compile() ([]weighed, error) {
 
 // version is a short fingerprint of everything that decides when a rule raises and clears:
 // its claim, thresholds and least evidence, and of each characteristic it speaks of the
-// family, limits, prior and what is remembered. Priority and who is told are not in it.
+// family, limits, prior, what is remembered and which test of a serial counts. Priority and who is told are not in it.
 func (p *Plan) version(r *Rule, c *claim.Claim) string {
 	type part struct {
 		Family       posterior.Family
 		Lower, Upper *float64
 		Prior        posterior.Prior
 		Remember     posterior.Remember
+		Retests      Retests `json:",omitzero"`
 	}
 	parts := map[string]part{}
 	for _, process := range c.Processes {
 		if ch, _, ok := p.split(process); ok {
-			parts[ch.Name] = part{ch.Family, ch.Lower, ch.Upper, ch.Prior, ch.Remember}
+			parts[ch.Name] = part{ch.Family, ch.Lower, ch.Upper, ch.Prior, ch.Remember, ch.Retests}
 		}
 	}
 	text, err := json.Marshal([]any{c.String(), r.Raise, r.Clear, r.LeastUnits, r.LeastOf, parts})

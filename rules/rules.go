@@ -1,9 +1,10 @@
 // Package rules is the engine: what an event makes the program believe and say.
 //
 // An Event is anything that can change what the program believes or says. State.Apply is a
-// deterministic function of the state and the event: it reads no clock, no file and no
-// random number, it logs nothing, and the same events from the same state give the same
-// Outcomes on any machine. So what was rehearsed is what runs, and what ran can be
+// deterministic function of the state, the event and, where the event takes a batch out, the
+// journal before it (History): what was counted can't be subtracted, so the memories are made
+// anew of what remains. It reads no clock, no file of its own and no random number, it logs
+// nothing, and the same events from the same state give the same Outcomes on any machine. So what was rehearsed is what runs, and what ran can be
 // verified: run drives it with live events, verify with the journal, explain over one
 // crossing.
 //
@@ -43,6 +44,7 @@ type Characteristic struct {
 	Upper    *float64           `json:"upper,omitempty"`
 	Prior    posterior.Prior    `json:"prior"`
 	Remember posterior.Remember `json:"remember"`
+	Retests  Retests            `json:"retests,omitzero"`
 }
 
 // Rule is a claim with its two thresholds, the least evidence, a priority, and who is told.
@@ -74,6 +76,8 @@ type Event struct {
 	Segment      *Segment      `json:"segment,omitempty"`
 	Acknowledged *Acknowledged `json:"acknowledged,omitempty"`
 	Watching     *Watching     `json:"watching,omitempty"`
+	Withdrawn    *Withdrawn    `json:"withdrawn,omitempty"`
+	Decided      *Decided      `json:"decided,omitempty"`
 }
 
 // Started says that a program began to watch.
@@ -108,6 +112,11 @@ type Batch struct {
 	Rows    Rows      `json:"rows"`
 	Series  []Series  `json:"series"`
 	Held    []HeldRow `json:"held,omitempty"` // rows of the same file that were not counted
+
+	// Replaces are batches that this one takes the place of: they are withdrawn with it.
+	Replaces []uint64 `json:"replaces,omitempty"`
+	// Decided is the decision by which what was held is counted after all; nil of all others.
+	Decided *Decided `json:"decided,omitempty"`
 }
 
 // Rows say where each counted row stands and what it is about; the slices are of one
@@ -154,7 +163,10 @@ type Again struct {
 	Name   string `json:"name"`  // the source and file under which it was taken
 }
 
-// Segment starts a new segment of processes.
+// Segment starts a new segment of processes. Without Since it begins with what is taken in
+// after it, whenever that was measured. With Since, a moment before the event and not before
+// the segment that it ends, it begins there: what was measured earlier does not count in it,
+// also where it arrives later, and what was measured since and has arrived counts.
 type Segment struct {
 	Processes []string  `json:"processes"`
 	Since     time.Time `json:"since,omitzero"`
@@ -176,6 +188,29 @@ type Watching struct {
 	Source string `json:"source"`
 	Able   bool   `json:"able"`
 	Why    string `json:"why"`
+}
+
+// Withdrawn takes batches out: the state is then as if they had never been counted. Batches
+// says which; Source, From and To how they were chosen, where that was by a stretch of time.
+type Withdrawn struct {
+	Batches []uint64  `json:"batches"`          // indexes of the events that counted them, ascending
+	Source  string    `json:"source,omitempty"` // every batch of this source
+	From    time.Time `json:"from,omitzero"`    // with a measurement made from here on
+	To      time.Time `json:"to,omitzero"`      // and before this
+	Reason  string    `json:"reason"`
+	By      string    `json:"by"`
+	How     string    `json:"how"` // how By was established
+}
+
+// Decided is a person's decision on something held. One to take it is part of the batch that it
+// brings, so that both are one record; one to set it aside for good is an event of its own.
+type Decided struct {
+	Held   uint64 `json:"held"`            // the event that held it
+	Lines  []int  `json:"lines,omitempty"` // rows of a file that was counted, ascending; none: a file held whole
+	Take   bool   `json:"take"`
+	Reason string `json:"reason"`
+	By     string `json:"by"`
+	How    string `json:"how"` // how By was established
 }
 
 // AlarmState is the state a rule is in, in the words of ISA-18.2 / IEC 62682.
@@ -222,6 +257,7 @@ const (
 	Answered        Cause = "answered"         // a person acknowledged it
 	Replaced        Cause = "replaced"         // the rule raised again before this one was answered
 	PlanChanged     Cause = "plan changed"     // the rule was edited or taken out
+	TakenOut        Cause = "withdrawn"        // batches were withdrawn, and without them it does not stand
 	EvidenceRestart Cause = "evidence restart" // a new segment: too few units to weigh the claim
 )
 
@@ -240,7 +276,7 @@ type Change struct {
 	Units    []Units            `json:"units,omitempty"`
 	Source   string             `json:"source,omitempty"` // of the batch that did it
 	File     string             `json:"file,omitempty"`
-	By       string             `json:"by,omitempty"` // of an answer
+	By       string             `json:"by,omitempty"` // of an answer, a new segment or a withdrawal
 	How      string             `json:"how,omitempty"`
 	Note     string             `json:"note,omitempty"`
 }

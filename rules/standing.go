@@ -26,6 +26,7 @@ type Standing struct {
 	SegmentNote  string             `json:"segment_note,omitempty"`
 	LastMeasured time.Time          `json:"last_measured,omitzero"`
 	LastTaken    time.Time          `json:"last_taken,omitzero"`
+	Tests        string             `json:"tests,omitempty"` // which test of a serial counts, where that was declared
 }
 
 // RuleStanding is where one rule stands.
@@ -66,7 +67,7 @@ func (s *State) standing(c *Characteristic, line string) Standing {
 	st := Standing{
 		Process: name, Label: c.Label(), Line: line, Unit: c.Unit, Quantity: string(kind),
 		Units: units(p), Taken: p.Taken, Segment: p.Segment, SegmentSince: p.SegmentSince,
-		SegmentNote: p.SegmentNote, LastMeasured: p.LastMeasured, LastTaken: p.LastTaken,
+		SegmentNote: p.SegmentNote, LastMeasured: p.LastMeasured, LastTaken: p.LastTaken, Tests: c.Retests.Says(),
 	}
 	q, err := s.Centre(name)
 	switch {

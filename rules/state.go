@@ -3,6 +3,7 @@ package rules
 import (
 	"encoding/json"
 	"fmt"
+	"maps"
 	"math"
 	"slices"
 	"strings"
@@ -22,7 +23,12 @@ type State struct {
 	processes map[string]*process
 	alarms    map[string]*alarm // rule name to its alarm
 	counters  counters
-	touched   map[string]bool // pieces changed since Pieces was last called
+	withdrawn map[uint64]bool     // batches that no longer count, by their index
+	decided   map[uint64][]int    // lines of held rows that were decided on, by the event that held them; 0 of a file
+	recalls   map[string][]recall // of each process, the older first
+	history   History             // the journal before the event that is being applied
+	every     int64               // batches of a process between two recalls of it
+	touched   map[string]bool     // pieces changed since Pieces was last called
 
 	scratch []evidence.Process
 }
@@ -31,15 +37,20 @@ type State struct {
 type process struct {
 	Family       posterior.Family   `json:"family"`
 	Remember     posterior.Remember `json:"remember"`
+	Retests      Retests            `json:"retests,omitzero"`
 	Taken        int64              `json:"taken"`   // measurements since the store began
+	Batches      int64              `json:"batches"` // that they came in
 	Segment      int                `json:"segment"` // number of the segment, counted from 0
 	SegmentSince time.Time          `json:"segment_since,omitzero"`
 	SegmentNote  string             `json:"segment_note,omitempty"`
+	SegmentFrom  time.Time          `json:"segment_from,omitzero"` // measurements made earlier do not count in the segment
+	Began        uint64             `json:"began"`                 // the event with which the segment, or the process, began
 	LastMeasured time.Time          `json:"last_measured,omitzero"`
 	LastTaken    time.Time          `json:"last_taken,omitzero"`
 	Memory       []byte             `json:"memory"`
 
 	memory *posterior.Memory
+	tests  *tests // nil where no serial is known
 }
 
 // alarm is what the engine knows of one rule.
@@ -65,16 +76,23 @@ func NewState() *State {
 		rulesOf:   map[string][]int{},
 		processes: map[string]*process{},
 		alarms:    map[string]*alarm{},
+		withdrawn: map[uint64]bool{},
+		decided:   map[uint64][]int{},
+		recalls:   map[string][]recall{},
+		every:     recallEvery,
 		touched:   map[string]bool{},
 	}
 }
 
 // Names of the pieces a state is kept in.
 const (
-	planPiece     = "plan"
-	countersPiece = "counters"
-	processPiece  = "process/"
-	rulePiece     = "rule/"
+	planPiece      = "plan"
+	countersPiece  = "counters"
+	withdrawnPiece = "withdrawn"
+	decidedPiece   = "decided"
+	processPiece   = "process/"
+	recallPiece    = "recall/"
+	rulePiece      = "rule/"
 )
 
 // Pieces are the parts of the state that have changed since the last call, encoded, each
@@ -84,18 +102,29 @@ func (s *State) Pieces() (map[string][]byte, error) {
 	for name := range s.touched {
 		var part any
 		switch {
+		case strings.HasPrefix(name, testsPiece), strings.HasPrefix(name, basePiece):
+			text, err := s.testsOf(name)
+			if err != nil {
+				return nil, fmt.Errorf("state of %s: %w", name, err)
+			}
+			pieces[name] = text
+			continue
 		case name == planPiece:
 			part = &s.plan
 		case name == countersPiece:
 			part = &s.counters
 		case strings.HasPrefix(name, processPiece):
 			p := s.processes[strings.TrimPrefix(name, processPiece)]
-			memory, err := p.memory.AppendBinary(nil)
-			if err != nil {
+			if err := p.write(); err != nil {
 				return nil, fmt.Errorf("state of %s: %w", name, err)
 			}
-			p.Memory = memory
 			part = p
+		case name == withdrawnPiece:
+			part = slices.Sorted(maps.Keys(s.withdrawn))
+		case name == decidedPiece:
+			part = s.decided
+		case strings.HasPrefix(name, recallPiece):
+			part = s.recalls[strings.TrimPrefix(name, recallPiece)]
 		default:
 			a, ok := s.alarms[strings.TrimPrefix(name, rulePiece)]
 			if !ok {
@@ -122,6 +151,9 @@ func Restore(pieces map[string][]byte) (*State, error) {
 			return nil, fmt.Errorf("saved state %q: %w", name, err)
 		}
 	}
+	if err := s.restoreTests(pieces); err != nil {
+		return nil, err
+	}
 	ready, err := s.plan.compile()
 	if err != nil {
 		return nil, fmt.Errorf("saved plan: %w", err)
@@ -141,11 +173,28 @@ func (s *State) restore(name string, text []byte) error {
 		if err := json.Unmarshal(text, p); err != nil {
 			return err
 		}
-		p.memory = posterior.NewMemory(p.Family, p.Remember)
-		if err := p.memory.UnmarshalBinary(p.Memory); err != nil {
+		s.processes[strings.TrimPrefix(name, processPiece)] = p
+		return p.read()
+	case name == withdrawnPiece:
+		var list []uint64
+		if err := json.Unmarshal(text, &list); err != nil {
 			return err
 		}
-		s.processes[strings.TrimPrefix(name, processPiece)] = p
+		for _, index := range list {
+			s.withdrawn[index] = true
+		}
+		return nil
+	case strings.HasPrefix(name, testsPiece), strings.HasPrefix(name, basePiece):
+		return nil // restoreTests
+	case name == decidedPiece:
+		return json.Unmarshal(text, &s.decided)
+	case strings.HasPrefix(name, recallPiece):
+		var list []recall
+		s.recalls[strings.TrimPrefix(name, recallPiece)] = nil
+		if err := json.Unmarshal(text, &list); err != nil {
+			return err
+		}
+		s.recalls[strings.TrimPrefix(name, recallPiece)] = list
 		return nil
 	case strings.HasPrefix(name, rulePiece):
 		a := &alarm{}
@@ -156,6 +205,17 @@ func (s *State) restore(name string, text []byte) error {
 		return nil
 	}
 	return fmt.Errorf("no piece of that name belongs to a state")
+}
+
+// write encodes the memory into Memory; read decodes it from there.
+func (p *process) write() (err error) {
+	p.Memory, err = p.memory.AppendBinary(nil)
+	return err
+}
+
+func (p *process) read() error {
+	p.memory = posterior.NewMemory(p.Family, p.Remember)
+	return p.memory.UnmarshalBinary(p.Memory)
 }
 
 // use puts compiled rules in force.
@@ -182,6 +242,10 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 		return s.applyAcknowledged(e)
 	case e.Segment != nil:
 		return s.applySegment(e)
+	case e.Withdrawn != nil:
+		return s.applyWithdrawn(e)
+	case e.Decided != nil:
+		return Outcomes{}, s.decide(e, e.Decided)
 	case e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
 		return Outcomes{}, nil
 	}
@@ -189,7 +253,11 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 }
 
 func (s *State) applyBatch(e *Event) (Outcomes, error) {
-	for _, series := range e.Batch.Series {
+	for k, series := range e.Batch.Series {
+		if slices.ContainsFunc(e.Batch.Series[:k], func(other Series) bool { return other.Process == series.Process }) {
+			return Outcomes{}, fmt.Errorf("source %s, file %s: the batch has two series of %s; one of each process is expected",
+				e.Batch.Source, e.Batch.File, series.Process)
+		}
 		p, ok := s.processes[series.Process]
 		if _, _, planned := s.plan.split(series.Process); !ok || !planned {
 			return Outcomes{}, fmt.Errorf("source %s, file %s: there is no process %q in the plan",
@@ -202,20 +270,46 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 			}
 		}
 	}
-	due := map[int]bool{}
-	for _, series := range e.Batch.Series {
-		s.take(e, &series)
-		for _, r := range s.rulesOf[series.Process] {
-			due[r] = true
+	due := map[string]bool{}
+	decision := e.Batch.Decided
+	if decision != nil {
+		if err := s.checkDecision(e, decision); err != nil {
+			return Outcomes{}, err
 		}
+	}
+	if len(e.Batch.Replaces) > 0 {
+		var err error
+		if due, err = s.withdraw(e, e.Batch.Replaces); err != nil {
+			return Outcomes{}, err
+		}
+	}
+	if decision != nil {
+		s.note(decision)
+	}
+	for _, series := range e.Batch.Series {
+		name := series.Process
+		s.recalls[name] = s.remind(name, s.recalls[name], s.processes[name], e)
+		due[name] = true
 	}
 	var out Outcomes
+	for i := range e.Batch.Series {
+		s.take(e, &e.Batch.Series[i], &out)
+	}
+	s.lookAt(e, due, &out)
+	return out, nil
+}
+
+// lookAt evaluates the rules that speak of any of the processes, in the order of the plan.
+func (s *State) lookAt(e *Event, processes map[string]bool, out *Outcomes) {
 	for i := range s.ready {
-		if due[i] {
-			s.look(e, i, &out)
+		if speaksOf(s.ready[i].claim, processes) {
+			s.look(e, i, out)
 		}
 	}
-	return out, nil
+}
+
+func speaksOf(c *claim.Claim, processes map[string]bool) bool {
+	return slices.ContainsFunc(c.Processes, func(p string) bool { return processes[p] })
 }
 
 // of is the number looked at, or the exposure, of observation i.
@@ -227,28 +321,70 @@ func (s *Series) of(i int) float64 {
 }
 
 // take adds a series to what its process remembers.
-func (s *State) take(e *Event, series *Series) {
+func (s *State) take(e *Event, series *Series, out *Outcomes) {
 	p := s.processes[series.Process]
-	// A rig's clock that runs ahead must not push what is older out of a window of time: there a
-	// measurement is no later than its arrival.
-	now := e.At.UnixNano()
-	times, within := make([]int64, len(series.Value)), make([]int64, len(series.Value))
-	for i, row := range series.Row {
-		times[i] = now
-		if e.Batch.Rows.Time != nil {
-			times[i] = e.Batch.Rows.Time[row]
-		}
-		within[i] = min(times[i], now)
-	}
-	p.memory.AddBatch(series.Value, series.Of, within)
-	p.Taken += int64(len(series.Value))
+	n := p.take(e, series)
+	out.Remarks = append(out.Remarks, n.remarks(p, e, series)...)
+	s.touched[processPiece+series.Process] = true
+	s.testsChanged(series.Process, n.changed, n.settled)
+}
+
+// take adds a series to what the process knows, and says what became of it.
+func (p *process) take(e *Event, series *Series) (n tally) {
+	times := timesOf(e, series)
+	p.Taken += int64(len(times))
+	p.Batches++
 	p.LastTaken = e.At
 	if len(times) > 0 {
 		if last := time.Unix(0, slices.Max(times)).UTC(); last.After(p.LastMeasured) {
 			p.LastMeasured = last
 		}
 	}
-	s.touched[processPiece+series.Process] = true
+	if p.tests != nil {
+		return p.test(e, series, times)
+	}
+	n.before = p.remember(e, series, times)
+	return n
+}
+
+// timesOf are the times at which a series was measured; that of the event where the source has none.
+func timesOf(e *Event, series *Series) []int64 {
+	times := make([]int64, len(series.Value))
+	for i, row := range series.Row {
+		times[i] = e.At.UnixNano()
+		if e.Batch.Rows.Time != nil {
+			times[i] = e.Batch.Rows.Time[row]
+		}
+	}
+	return times
+}
+
+// remember adds what of a series belongs to the segment to the memory.
+func (p *process) remember(e *Event, series *Series, times []int64) (before int) {
+	values, of := series.Value, series.Of
+	if from := p.SegmentFrom; !from.IsZero() && slices.ContainsFunc(times, func(t int64) bool { return t < from.UnixNano() }) {
+		values, of, times, before = since(from.UnixNano(), values, of, times)
+		if len(values) == 0 {
+			return before
+		}
+	}
+	p.memory.AddBatch(values, of, notLater(times, e.At))
+	return before
+}
+
+// since leaves out the measurements made before a moment, and counts them.
+func since(from int64, values, of []float64, times []int64) (v, o []float64, t []int64, before int) {
+	for i := range values {
+		if times[i] < from {
+			before++
+			continue
+		}
+		v, t = append(v, values[i]), append(t, times[i])
+		if of != nil {
+			o = append(o, of[i])
+		}
+	}
+	return v, o, t, before
 }
 
 func (s *State) applyAdopted(e *Event) (Outcomes, error) {
@@ -262,7 +398,7 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 	s.plan = plan
 	s.touched[planPiece] = true
 	s.touched[countersPiece] = true
-	s.fitProcesses(&out)
+	s.fitProcesses(e, &out)
 	s.use(ready)
 	versions := map[string]string{}
 	for _, r := range ready {
@@ -285,25 +421,40 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 
 // fitProcesses makes a process for each the plan has, and starts one anew whose family or
 // way of remembering has changed: what it held does not answer the new question.
-func (s *State) fitProcesses(out *Outcomes) {
+func (s *State) fitProcesses(e *Event, out *Outcomes) {
 	for _, c := range s.plan.Characteristics {
 		for _, line := range c.Lines {
 			name := ProcessName(c.Name, line)
-			old, ok := s.processes[name]
-			if ok && old.Family == c.Family && old.Remember == c.Remember {
+			old := s.processes[name]
+			p := fitted(old, &c, e.Index)
+			if p == old {
 				continue
 			}
-			p := &process{Family: c.Family, Remember: c.Remember}
-			p.memory = posterior.NewMemory(c.Family, c.Remember)
-			if ok {
-				p.Taken, p.Segment, p.LastMeasured, p.LastTaken = old.Taken, old.Segment+1, old.LastMeasured, old.LastTaken
+			if old != nil {
 				out.Remarks = append(out.Remarks, fmt.Sprintf(
-					"%s: its family or what it remembers has changed, so its evidence starts anew", name))
+					"%s: its family, what it remembers or which test of a serial counts has changed, so its evidence starts anew", name))
 			}
+			gone := old.allTests()
 			s.processes[name] = p
 			s.touched[processPiece+name] = true
+			s.testsChanged(name, gone, true)
 		}
 	}
+}
+
+// fitted is the process as a characteristic now wants it: itself where it fits, else one that
+// starts anew with the event. There may have been none before.
+func fitted(old *process, c *Characteristic, event uint64) *process {
+	if old != nil && old.Family == c.Family && old.Remember == c.Remember && old.Retests == c.Retests {
+		return old
+	}
+	p := &process{Family: c.Family, Remember: c.Remember, Retests: c.Retests, Began: event}
+	p.memory, p.tests = posterior.NewMemory(c.Family, c.Remember), newTests(p)
+	if old != nil {
+		p.Taken, p.Batches, p.Segment = old.Taken, old.Batches, old.Segment+1
+		p.LastMeasured, p.LastTaken = old.LastMeasured, old.LastTaken
+	}
+	return p
 }
 
 // retire ends the alarm of a rule that is gone or is no longer the same rule.
@@ -316,42 +467,15 @@ func (s *State) retire(e *Event, name string, out *Outcomes) {
 	s.touched[rulePiece+name] = true
 }
 
-func (s *State) applySegment(e *Event) (Outcomes, error) {
-	for _, name := range e.Segment.Processes {
-		if _, _, ok := s.plan.split(name); !ok {
-			return Outcomes{}, fmt.Errorf("there is no process %q in the plan", name)
-		}
-	}
-	var out Outcomes
-	due := map[int]bool{}
-	for _, name := range e.Segment.Processes {
-		p := s.processes[name]
-		p.memory.StartSegment()
-		p.Segment++
-		p.SegmentSince, p.SegmentNote = e.At, e.Segment.Note
-		s.touched[processPiece+name] = true
-		for _, r := range s.rulesOf[name] {
-			due[r] = true
-		}
-	}
-	for i, r := range s.ready {
-		if due[i] && s.alarms[r.Name].active() {
-			s.restart(e, r.Name, &out)
-		}
-	}
-	return out, nil
-}
-
 // active says whether the condition of the alarm stands.
 func (a *alarm) active() bool { return a.State == Unacknowledged || a.State == Acked }
 
-// restart returns an active alarm to normal because its evidence begins anew.
-func (s *State) restart(e *Event, rule string, out *Outcomes) {
-	to := Normal
-	if s.alarms[rule].State == Unacknowledged {
-		to = Returned
+// without is the state of an active alarm once its condition no longer stands.
+func (a *alarm) without() AlarmState {
+	if a.State == Unacknowledged {
+		return Returned
 	}
-	s.step(e, rule, to, Change{Cause: EvidenceRestart, Note: e.Segment.Note, By: e.Segment.By, How: e.Segment.How}, out)
+	return Normal
 }
 
 func (s *State) applyAcknowledged(e *Event) (Outcomes, error) {
@@ -388,6 +512,9 @@ func (s *State) step(e *Event, rule string, to AlarmState, c Change, out *Outcom
 	if e.Batch != nil {
 		c.Source, c.File = e.Batch.Source, e.Batch.File
 	}
+	if w := e.Withdrawn; w != nil {
+		c.Note, c.By, c.How = w.Reason, w.By, w.How
+	}
 	a.State, a.Since = to, e.At
 	s.touched[rulePiece+rule] = true
 	out.Changes = append(out.Changes, c)
@@ -403,6 +530,9 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 	s.touched[rulePiece+r.Name] = true
 	out.Looks = append(out.Looks, look)
 	if look.Withheld != "" {
+		if a.active() && e.takesOut() {
+			s.step(e, r.Name, a.without(), Change{Cause: TakenOut}, out)
+		}
 		return
 	}
 	p := look.Odds().Probability()
@@ -410,11 +540,11 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 	case p >= r.Raise && !a.active():
 		s.raise(e, i, look, out)
 	case p <= r.Clear && a.active():
-		to := Normal
-		if a.State == Unacknowledged {
-			to = Returned
+		cause := Cleared
+		if e.takesOut() {
+			cause = TakenOut
 		}
-		s.step(e, r.Name, to, s.figures(i, look, Cleared), out)
+		s.step(e, r.Name, a.without(), s.figures(i, look, cause), out)
 	}
 }
 

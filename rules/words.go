@@ -3,6 +3,7 @@ package rules
 import (
 	"fmt"
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 	"time"
@@ -232,13 +233,20 @@ func (p *Plan) Tell(c *Change, zone *time.Location) []string {
 	switch c.Cause {
 	case Raised:
 		told = append(told, says+".", p.how(c)+".")
-		told = append(told, fmt.Sprintf("It crossed %s at %s%s.", threshold(p, c), at, withFile(c)))
+		told = append(told, fmt.Sprintf("It crossed %s at %s%s%s.", threshold(p, c), at, withFile(c), afterWithdrawal(c)))
 		if r, ok := p.Rule(c.Rule); ok && r.FirstCheck != "" {
 			told = append(told, "Look first at: "+strings.TrimSuffix(r.FirstCheck, ".")+".")
 		}
 	case Cleared:
 		told = append(told, "No longer evident: "+says+".", p.how(c)+".")
 		told = append(told, fmt.Sprintf("It fell to %s at %s%s; %s.", threshold(p, c), at, withFile(c), stands(c.To)))
+	case TakenOut:
+		told = append(told, "No longer evident: "+says+".")
+		if c.Look != nil {
+			told = append(told, p.how(c)+".")
+		}
+		told = append(told, fmt.Sprintf("A%d does not stand without what was withdrawn at %s%s; %s.",
+			c.Alarm, at, withdrawnBy(c), stands(c.To)))
 	case Answered:
 		told = append(told, fmt.Sprintf("%s acknowledged A%d (%s) at %s; %s.", c.By, c.Alarm, says, at, stands(c.To)))
 		if c.Note != "" {
@@ -273,6 +281,22 @@ func stands(s AlarmState) string {
 		return "it has returned to normal and still waits for an acknowledgement"
 	}
 	return "it is back to normal"
+}
+
+// withdrawnBy says who took batches out, and why; or which file took the place of another.
+func withdrawnBy(c *Change) string {
+	if c.By == "" {
+		return withFile(c) + ", which takes the place of what was counted before"
+	}
+	return fmt.Sprintf(" by %s (%s)", c.By, orNone(c.Note))
+}
+
+// afterWithdrawal says that it took a withdrawal for an alarm to be raised.
+func afterWithdrawal(c *Change) string {
+	if c.By == "" {
+		return ""
+	}
+	return fmt.Sprintf(", once batches were withdrawn by %s (%s)", c.By, orNone(c.Note))
 }
 
 func withFile(c *Change) string {
@@ -312,7 +336,24 @@ func (p *Plan) how(c *Change) string {
 	if c.Quantity != nil {
 		text += "; " + p.QuantityText(c.Rule, *c.Quantity)
 	}
+	for _, says := range p.tests(c) {
+		text += "; " + says
+	}
 	return text
+}
+
+// tests says which test of a serial counts in the numbers of a change.
+func (p *Plan) tests(c *Change) (says []string) {
+	for _, u := range c.Units {
+		ch, _, ok := p.split(u.Process)
+		if !ok {
+			continue
+		}
+		if text := ch.Retests.Says(); text != "" && !slices.Contains(says, text) {
+			says = append(says, text)
+		}
+	}
+	return says
 }
 
 // list joins parts as a sentence does.

@@ -43,11 +43,10 @@ func writeFile(tx *bolt.Tx, f *FileMemory) error {
 	if err := tx.Bucket(filesBucket).Put(key, append(append(b, f.SHA256[:]...), f.Progress...)); err != nil {
 		return err
 	}
-	contents := tx.Bucket(contentsBucket)
-	if !f.Batch || contents.Get(f.SHA256[:]) != nil {
+	if !f.Batch {
 		return nil
 	}
-	return contents.Put(f.SHA256[:], append(number(f.Index), key...))
+	return tx.Bucket(contentsBucket).Put(f.SHA256[:], append(number(f.Index), key...))
 }
 
 // readFile reads what is remembered of a file.
@@ -98,7 +97,8 @@ func (s *Store) Files(source string, visit func(FileMemory)) error {
 	})
 }
 
-// Taken says which batch took a content first, and from where.
+// Taken says which batch took a content last, and from where: there is more than one where an
+// earlier one was withdrawn.
 func (s *Store) Taken(sha [32]byte) (index uint64, source, file string, found bool, err error) {
 	err = s.view("find a content", func(tx *bolt.Tx) error {
 		v := tx.Bucket(contentsBucket).Get(sha[:])

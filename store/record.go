@@ -5,6 +5,7 @@ import (
 	"encoding/binary"
 	"encoding/json"
 	"fmt"
+	"slices"
 	"time"
 
 	"steelyard/rules"
@@ -13,7 +14,9 @@ import (
 // A record is one event with what followed from it. Its bytes are written once; what is
 // hashed, copied or proved later is these bytes, never a second encoding.
 //
-//	version  1 byte: 2
+//	version  1 byte: 2, or 3 where it says what programs of version 2 do not know: a withdrawal, a
+//	         batch that replaces others, a decision on what was held, a segment from a moment on, a plan
+//	         that says which test of a serial counts
 //	head     its length (uvarint), then a JSON array of two objects, the event and the
 //	         outcomes, with the names of package rules, but without what follows here; floats
 //	         in the shortest form that reads back to the same bits, times in RFC 3339, UTC
@@ -26,8 +29,24 @@ import (
 // The columns are drawn in columns.go. Nothing follows the looks. A reader refuses a version
 // that it does not know. Within one version names may be added to the head, and a reader
 // ignores those it does not know: so whatever changes what the engine does with an event gets
-// a new version. The same entry always gives the same bytes.
-const recordVersion = 2
+// a new version, which only the records that say it have. The same entry always gives the same
+// bytes.
+const (
+	recordVersion    = 2
+	correctedVersion = 3
+)
+
+// versionOf is the least version that says all that the event does.
+func versionOf(e *rules.Event) byte {
+	knowsSerials := func(c rules.Characteristic) bool { return c.Retests != rules.Retests{} }
+	switch {
+	case e.Adopted != nil && slices.ContainsFunc(e.Adopted.Plan.Characteristics, knowsSerials):
+		return correctedVersion
+	case e.Withdrawn != nil, e.Decided != nil, e.Batch != nil && e.Batch.Decided != nil, e.Batch != nil && len(e.Batch.Replaces) > 0, e.Segment != nil && !e.Segment.Since.IsZero():
+		return correctedVersion
+	}
+	return recordVersion
+}
 
 // eventHead is an event without the columns, which stand after the head. Its fields hide
 // those of the same name in what it embeds.
@@ -63,7 +82,7 @@ func encode(e *Entry) ([]byte, error) {
 	}
 	text.Truncate(text.Len() - 1) // the newline
 
-	b := append(make([]byte, 0, text.Len()+1024), recordVersion)
+	b := append(make([]byte, 0, text.Len()+1024), versionOf(&event))
 	b = binary.AppendUvarint(b, uint64(text.Len()))
 	b = append(b, text.Bytes()...)
 	if event.Batch != nil {
@@ -80,6 +99,8 @@ func inUTC(e *Entry) (rules.Event, rules.Outcomes) {
 	set(&event.Started, func(s *rules.Started) *time.Time { return &s.LastAlive })
 	set(&event.Batch, func(b *rules.Batch) *time.Time { return &b.Written })
 	set(&event.Segment, func(s *rules.Segment) *time.Time { return &s.Since })
+	set(&event.Withdrawn, func(w *rules.Withdrawn) *time.Time { return &w.From })
+	set(&event.Withdrawn, func(w *rules.Withdrawn) *time.Time { return &w.To })
 	if outcomes.Changes != nil {
 		outcomes.Changes = append(make([]rules.Change, 0, len(outcomes.Changes)), outcomes.Changes...)
 	}
@@ -131,8 +152,8 @@ func appendLooks(b []byte, looks []rules.Look) []byte {
 
 // decode reads a record.
 func decode(b []byte) (*Entry, error) {
-	if len(b) == 0 || b[0] != recordVersion {
-		return nil, fmt.Errorf("its version is not the %d that this program reads", recordVersion)
+	if len(b) == 0 || b[0] != recordVersion && b[0] != correctedVersion {
+		return nil, fmt.Errorf("its version is not one of those that this program reads, %d and %d", recordVersion, correctedVersion)
 	}
 	c := &columns{rest: b[1:]}
 	text := c.take(c.uvarint())

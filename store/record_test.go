@@ -225,9 +225,11 @@ func TestRecordRefused(t *testing.T) {
 	if _, err := decode(append(bytes.Clone(whole), 0)); err == nil {
 		t.Error("a byte after the end is not noticed")
 	}
-	whole[0]++
-	if _, err := decode(whole); err == nil {
-		t.Error("another version is not noticed")
+	for _, version := range []byte{0, recordVersion - 1, correctedVersion + 1, 255} {
+		whole[0] = version
+		if _, err := decode(whole); err == nil {
+			t.Errorf("the version %d is not noticed", version)
+		}
 	}
 }
 

@@ -5,7 +5,7 @@
 // Buckets, their keys and values. Numbers in keys are 8 bytes, big-endian, so that they sort;
 // strings in composite keys end with a zero byte, which no source, feed or file name holds.
 //
-//	meta     "format"                 → "3": the version of this layout; another is refused
+//	meta     "format"                 → "4": the version of this layout; another is refused
 //	         "origin"                 → a random UUID, made with the store or its new origin
 //	         "signed"                 → size of the last checkpoint that Commit knew of
 //	origins  number, from 0           → Origin as JSON
@@ -14,9 +14,13 @@
 //	                                    leaf first, 32 bytes each (package ledger)
 //	times    at (ns since 1970), index → nothing: the first record at or after a moment
 //	alarms   alarm number, index      → nothing: the records that changed an alarm
-//	state    name of a piece          → the piece, as the engine encoded it
+//	state    name of a piece          → the piece, as the engine encoded it; a large one in a bucket
+//	                                    of that name, under "piece" (pieces.go)
 //	files    source 0 file            → FileMemory (files.go)
-//	contents SHA-256                  → index of the batch that took it, source 0 file
+//	contents SHA-256                  → index of the batch that took it last, source 0 file
+//	batches  source 0 file 0 index    → nothing: the records that counted a batch
+//	held     index                    → how many of its rows wait for a decision (uvarint); 0
+//	                                    where it is a file held whole (held.go)
 //	outbox   feed 0 number            → Message as JSON
 //
 // Beside the store lie the stamp (stamp.go) and, named by the origin, the key that checkpoints
@@ -57,7 +61,7 @@ var ErrStorage = errors.New("storage failed")
 
 const (
 	fileName = "steelyard.db"
-	format   = "3"
+	format   = "4"
 )
 
 var (
@@ -71,9 +75,11 @@ var (
 	outboxBucket   = []byte("outbox")
 	treeBucket     = []byte("tree")
 	originsBucket  = []byte("origins")
+	batchesBucket  = []byte("batches")
+	heldBucket     = []byte("held")
 
 	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
-		treeBucket, originsBucket}
+		treeBucket, originsBucket, batchesBucket, heldBucket}
 
 	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
@@ -333,13 +339,8 @@ func (s *Store) write(tx *bolt.Tx, step *Step) error {
 	if err := s.noteSigned(tx); err != nil {
 		return err
 	}
-	state := tx.Bucket(stateBucket)
 	for name, piece := range step.Pieces {
-		if piece == nil {
-			if err := state.Delete([]byte(name)); err != nil {
-				return err
-			}
-		} else if err := state.Put([]byte(name), piece); err != nil {
+		if err := putPiece(tx, []byte(name), piece); err != nil {
 			return err
 		}
 	}
@@ -377,6 +378,9 @@ func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 	if err := tx.Bucket(timesBucket).Put(append(number(uint64(e.Event.At.UnixNano())), index...), nil); err != nil {
 		return err
 	}
+	if err := errors.Join(noteBatch(tx, e), noteHeld(tx, &e.Event)); err != nil {
+		return err
+	}
 	for _, c := range e.Outcomes.Changes {
 		if err := tx.Bucket(alarmsBucket).Put(append(number(uint64(c.Alarm)), index...), nil); err != nil {
 			return err
@@ -391,18 +395,6 @@ func number(n uint64) []byte { return binary.BigEndian.AppendUint64(nil, n) }
 // joined is a composite key.
 func joined(name string, rest []byte) []byte {
 	return append(append([]byte(name), 0), rest...)
-}
-
-// Pieces are the pieces of the engine's state.
-func (s *Store) Pieces() (map[string][]byte, error) {
-	pieces := map[string][]byte{}
-	err := s.view("read the state", func(tx *bolt.Tx) error {
-		return tx.Bucket(stateBucket).ForEach(func(k, v []byte) error {
-			pieces[string(k)] = bytes.Clone(v)
-			return nil
-		})
-	})
-	return pieces, err
 }
 
 func (s *Store) view(what string, read func(*bolt.Tx) error) error {

@@ -381,6 +381,9 @@ func (m *model) step(t *rapid.T, s *Store) (st Step) {
 			st.Pieces[name] = nil
 			delete(m.pieces, name)
 		} else {
+			if rapid.Bool().Draw(t, "large") {
+				piece = strings.Repeat(piece, 1+largePiece/len(piece))
+			}
 			st.Pieces[name], m.pieces[name] = []byte(piece), piece
 		}
 	}
@@ -391,22 +394,20 @@ func (m *model) check(t *rapid.T, s *Store) {
 	if s.Next() != uint64(len(m.records)) {
 		t.Fatalf("next is %d after %d records", s.Next(), len(m.records))
 	}
-	first := map[byte]uint64{}
+	last := map[byte]uint64{}
 	err := s.Journal(0, s.Next(), func(e rules.Event, _ rules.Outcomes) error {
 		content := m.records[e.Index]
 		if e.Batch.Series[0].Value[0] != float64(content) {
 			t.Fatalf("record %d: %+v", e.Index, e.Batch)
 		}
-		if _, known := first[content]; !known {
-			first[content] = e.Index
-		}
+		last[content] = e.Index
 		return nil
 	})
 	if err != nil {
 		t.Fatal(err)
 	}
 	for content := range byte(20) {
-		want, known := first[content]
+		want, known := last[content]
 		if i, _, _, found, err := s.Taken([32]byte{content}); err != nil || found != known || i != want {
 			t.Fatalf("content %d: %d %v %v, want %d %v", content, i, found, err, want, known)
 		}

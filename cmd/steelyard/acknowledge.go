@@ -4,8 +4,6 @@ import (
 	"fmt"
 	"strconv"
 	"strings"
-
-	"steelyard/monitor"
 )
 
 type acknowledgeVerb struct {
@@ -25,10 +23,7 @@ func (v *acknowledgeVerb) Run(d *desk) error {
 		return err
 	}
 	defer c.Close()
-	by, how := monitor.Whoever(), "account of the operating system"
-	if v.By != "" {
-		by, how = v.By, "as typed, by account "+by
-	}
+	by, how := whoever(v.By)
 	a, err := c.Acknowledge(number, by, how, v.Note)
 	if err != nil {
 		return err
@@ -37,9 +32,7 @@ func (v *acknowledgeVerb) Run(d *desk) error {
 		return d.object(a)
 	}
 	fmt.Fprintf(d.out, "%s is %s, answered by %s at %s: %s\n", a.Alarm, a.State, a.By, clock(a.At, cfg.Site.Zone), a.Says)
-	if !running {
-		fmt.Fprintln(d.out, "No daemon runs; the feeds are told at the next start.")
-	}
+	d.notWatching(running)
 	return nil
 }
 

@@ -47,7 +47,7 @@ func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) 
 		x.Rule.Name, x.Version, x.Rule.Claim, x.Rule.Raise, x.Rule.Clear, x.Rule.LeastUnits, x.Rule.Priority,
 		strings.Join(x.Rule.Tell, ", "))
 	for _, p := range x.Priors {
-		fmt.Fprintf(w, "  %s: %s family, prior %s, remembers %s\n", p.Characteristic, p.Family, plainJSON(p.Prior), plainJSON(p.Remember))
+		fmt.Fprintf(w, "  %s: %s family, prior %s, remembers %s%s\n", p.Characteristic, p.Family, plainJSON(p.Prior), plainJSON(p.Remember), testsText(p.Tests))
 	}
 	fmt.Fprintf(w, "  in force since %s (record %d): configuration %s, SHA-256 %s, adopted by %s\n",
 		at(x.Adopted.At), x.Adopted.Record, x.Adopted.File, x.Adopted.Digest, x.Adopted.By)
@@ -85,8 +85,36 @@ func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) 
 	for _, s := range x.Steps {
 		fmt.Fprintf(w, "  %s (record %d) %s: %s\n", at(s.At), s.Record, s.Cause, s.Text)
 	}
+	printWithdrawnSince(w, x, zone)
 	_, err := fmt.Fprintln(w, "\n"+x.Caution)
 	return err
+}
+
+// printWithdrawnSince says what of the evidence no longer counts.
+func printWithdrawnSince(w io.Writer, x *monitor.Explanation, zone *time.Location) {
+	if x.Stands == nil {
+		return
+	}
+	fmt.Fprintln(w, "\nWithdrawn since")
+	for _, s := range x.Withdrawn {
+		by := ""
+		if s.By != "" {
+			by = " by " + s.By
+		}
+		fmt.Fprintf(w, "  the batch of record %d, at %s (record %d)%s: %s\n", s.Batch, clock(s.At, zone), s.Record, by, s.Reason)
+	}
+	if *x.Stands {
+		fmt.Fprintf(w, "  Without them %s would have been raised at the same record.\n", x.Alarm)
+	} else {
+		fmt.Fprintf(w, "  Without them %s would not have been raised at that record.\n", x.Alarm)
+	}
+}
+
+func testsText(says string) string {
+	if says == "" {
+		return ""
+	}
+	return "; " + says
 }
 
 func lookText(l *monitor.LookAt) (p, odds string) {

@@ -33,6 +33,9 @@ type commandLine struct {
 	Acknowledge acknowledgeVerb `cmd:"" help:"Answer an alarm."`
 	Explain     explainVerb     `cmd:"" help:"Show what an alarm rests on."`
 	Daylog      daylogVerb      `cmd:"" help:"Write the log of a production day."`
+	Withdraw    withdrawVerb    `cmd:"" help:"Take batches out of what counts, with a reason."`
+	Mark        markVerb        `cmd:"" help:"Start a segment: a tool was changed, new material came."`
+	Held        heldVerb        `cmd:"" help:"What was not counted and waits: list, show, decide."`
 	Weigh       weighVerb       `cmd:"" help:"Weigh a claim once, on given figures."`
 }
 

@@ -77,6 +77,9 @@ func printStatus(w io.Writer, st *monitor.Status, zone *time.Location) error {
 	if err := t.Flush(); err != nil {
 		return err
 	}
+	if h := st.Waiting; h.Files+h.Rows > 0 {
+		fmt.Fprintf(w, "\nHeld, and waiting for a decision: files %d, rows of others %d. steelyard held lists them.\n", h.Files, h.Rows)
+	}
 	_, err := fmt.Fprintln(w, "\n"+st.Caution)
 	return err
 }
@@ -94,10 +97,18 @@ func lookCells(r *rules.RuleStanding, zone *time.Location) (p, odds, at string) 
 
 func estimateCells(p *rules.Standing) string {
 	if p.Estimate == nil {
-		return "-\t" + p.Why + "\t" + p.Unit
+		return "-\t" + p.Why + "\t" + withTests(p)
 	}
 	f := func(x float64) string { return strconv.FormatFloat(x, 'f', rules.Decimals(*p.Estimate), 64) }
-	return fmt.Sprintf("%s %s\t%s and %s\t%s", p.Quantity, f(p.Estimate.Median), f(p.Estimate.Lower), f(p.Estimate.Upper), p.Unit)
+	return fmt.Sprintf("%s %s\t%s and %s\t%s", p.Quantity, f(p.Estimate.Median), f(p.Estimate.Lower), f(p.Estimate.Upper), withTests(p))
+}
+
+// withTests is the unit, with which test of a serial counts.
+func withTests(p *rules.Standing) string {
+	if p.Tests == "" {
+		return p.Unit
+	}
+	return p.Unit + " (" + p.Tests + ")"
 }
 
 func measuredCell(p *rules.Standing, zone *time.Location) string {

@@ -38,6 +38,7 @@ func (c *checker) characteristics(raw *rawFile) {
 		c.limits(key+".plausible", r.Plausible)
 		ch.Remember = c.remember(key+".remember", r.Remember)
 		ch.Prior = c.prior(key+".prior", r.Prior, ch.Family)
+		ch.Retests = c.retests(key, r.Retests, r.Serials)
 		c.cfg.Plan.Characteristics = append(c.cfg.Plan.Characteristics, ch)
 	}
 	if len(raw.Characteristic) == 0 {

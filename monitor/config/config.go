@@ -21,7 +21,14 @@ type Config struct {
 	Plan    rules.Plan
 	Sources []Source // in the order of the file
 	Feeds   []Feed   // in the order of the file
+
+	// Marks is the folder of marks, watched as a source is; nil where there is none. Nothing in
+	// it is measured: its Columns are empty.
+	Marks *Source
 }
+
+// MarksName is what the folder of marks is called among the sources.
+const MarksName = "marks"
 
 // Site is where the program stands.
 type Site struct {
@@ -51,6 +58,7 @@ type Source struct {
 	Settle  time.Duration // a file is read once it has not changed for this long; 0..1h
 	Scan    time.Duration // the folder is looked through this often whatever the watcher says
 	Largest int64         // bytes; a larger file is held unread
+	Resent  string        // other content under a name that was counted: "hold", "add" or "replace"
 	Form    Form
 	Columns Columns
 }

@@ -8,6 +8,8 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"steelyard/rules"
 )
 
 var update = flag.Bool("update", false, "write the expected texts anew")
@@ -52,9 +54,9 @@ columns = { line = "Line", head = "Head" }
 %RULES%
 `
 
-func parse(t *testing.T, characteristic, source, rules string) (*Config, error) {
+func parse(t *testing.T, characteristic, source, rule string) (*Config, error) {
 	t.Helper()
-	text := strings.NewReplacer("%CHARACTERISTIC%", characteristic, "%SOURCE%", source, "%RULES%", rules).Replace(least)
+	text := strings.NewReplacer("%CHARACTERISTIC%", characteristic, "%SOURCE%", source, "%RULES%", rule).Replace(least)
 	return Parse("config.toml", []byte(text), "/plant")
 }
 
@@ -103,12 +105,39 @@ func TestSaysWhatIsWrong(t *testing.T) {
 		{"", "[source.two]\nfolder = \"d2\"\nlargest = \"3 XB\"\ncolumns = { line = \"l\", head = \"h\" }", "", `such as "64MB"`},
 		{"", "[source.two]\nfolder = \"d2\"\ndecimal = \",\"\ngrouping = \",\"\ncolumns = { line = \"l\", head = \"h\" }", "", "neither the decimal sign"},
 		{"", "[source.two]\nfolder = \"d2\"\nencoding = \"utf8\"\ncolumns = { line = \"l\", head = \"h\" }", "", `did you mean "utf-8"`},
+		{"retests = \"frist\"", "", "", `did you mean "first"`},
+		{"retests = \"first\"", "", "", "no source brings serials"},
+		{"serials = { units = 5, days = 3 }", "", "", "either units or days"},
+		{"serials = { units = 0.5 }", "", "", "a whole number of units"},
+		{"serials = { unts = 5 }", "", "", `did you mean "units"`},
+		{"serials = 5", "", "", "{ units = 10000 }"},
+		{"", "resent = \"replaced\"", "", `did you mean "replace"`},
+		{"", "[marks]\nfolder = \"drop\"", "", `the source "rig" watches the same folder`},
+		{"", "[marks]\nfolder = \"state/m\"", "", "outside the state folder"},
+		{"", "[marks]\nfiles = \"*\"", "", "the marks have no folder"},
+		{"", "[marks]\nfolder = \"m\"\nfiels = \"*\"", "", `did you mean "files"`},
+		{"", "[marks]\nfolder = \"m\"\n[source.marks]\nfolder = \"d2\"\ncolumns = { line = \"l\", head = \"h\" }", "", "taken by the folder of marks"},
 		{"", "[site]", "", "site"},
 	} {
 		_, err := parse(t, c.characteristic, c.source, c.rules)
 		var faults Faults
 		if !errors.As(err, &faults) || !strings.Contains(err.Error(), c.says) {
 			t.Errorf("%+v: %v", c, err)
+		}
+	}
+}
+
+func TestRetests(t *testing.T) {
+	for text, want := range map[string]rules.Retests{
+		"": {}, "retests = \"all\"": {}, "retests = \"first\"": {Count: "first", Units: 10000},
+		"retests = \"last\"\nserials = { days = 30 }": {Count: "last", Days: 30}, "serials = { units = 50 }": {Count: "all", Units: 50},
+	} {
+		serial := "[source.two]\nfolder = \"d2\"\ncolumns = { line = \"l\", serial = \"s\", head = \"h\" }"
+		cfg, err := parse(t, text, serial, "")
+		if err != nil {
+			t.Errorf("%q: %v", text, err)
+		} else if got := cfg.Plan.Characteristics[0].Retests; got != want {
+			t.Errorf("%q: %+v, want %+v", text, got, want)
 		}
 	}
 }

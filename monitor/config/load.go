@@ -47,6 +47,8 @@ func Parse(name string, text []byte, base string) (*Config, error) {
 	c.characteristics(raw)
 	c.feeds(raw)
 	c.sources(raw)
+	c.marks(raw)
+	c.retestsHaveSerials()
 	c.rules(raw)
 	if len(c.faults) > 0 {
 		return nil, c.faults.sorted()

@@ -19,6 +19,7 @@ type rawFile struct {
 	Source         map[string]rawSource         `toml:"source"`
 	Rule           []rawRule                    `toml:"rule"`
 	Feed           map[string]rawFeed           `toml:"feed"`
+	Marks          *rawMarks                    `toml:"marks"`
 }
 
 type rawSite struct {
@@ -38,6 +39,8 @@ type rawCharacteristic struct {
 	Plausible rawLimits `toml:"plausible"`
 	Remember  any       `toml:"remember"`
 	Prior     any       `toml:"prior"`
+	Retests   string    `toml:"retests"`
+	Serials   any       `toml:"serials"`
 }
 
 type rawLimits struct {
@@ -52,6 +55,7 @@ type rawSource struct {
 	Settle     string         `toml:"settle"`
 	Scan       string         `toml:"scan"`
 	Largest    string         `toml:"largest"`
+	Resent     string         `toml:"resent"`
 	Delimiter  string         `toml:"delimiter"`
 	Decimal    string         `toml:"decimal"`
 	Grouping   string         `toml:"grouping"`
@@ -62,6 +66,13 @@ type rawSource struct {
 	TimeFormat string         `toml:"time_format"`
 	TimeZone   string         `toml:"time_zone"`
 	Columns    map[string]any `toml:"columns"`
+}
+
+type rawMarks struct {
+	Folder string `toml:"folder"`
+	Files  string `toml:"files"`
+	Settle string `toml:"settle"`
+	Scan   string `toml:"scan"`
 }
 
 type rawRule struct {

@@ -36,6 +36,7 @@ func (c *checker) sources(raw *rawFile) {
 		s.Settle = c.duration(key+".settle", r.Settle, 2*time.Second, 0, time.Hour)
 		s.Scan = c.duration(key+".scan", r.Scan, 30*time.Second, 100*time.Millisecond, time.Hour)
 		s.Largest = c.size(key+".largest", r.Largest, 64e6)
+		s.Resent = c.resent(key+".resent", r.Resent)
 		c.form(key, &r, &s.Form)
 		c.columns(key+".columns", r.Columns, &s.Columns, raw)
 		c.cfg.Sources = append(c.cfg.Sources, s)

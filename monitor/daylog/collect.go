@@ -6,6 +6,7 @@ import (
 	"strings"
 	"time"
 
+	"steelyard/monitor/config"
 	"steelyard/rules"
 )
 
@@ -45,6 +46,11 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 	case e.Held != nil:
 		c.source(e.Held.Source).HeldFiles++
 		c.held(Held{At: e.At, Record: e.Index, Source: e.Held.Source, File: e.Held.File, Reason: e.Held.Reason})
+		if e.Held.Source == config.MarksName { // of other files held whole the first reason says enough
+			for _, row := range e.Held.Rows {
+				c.held(Held{At: e.At, Record: e.Index, Source: e.Held.Source, File: e.Held.File, Line: row.Line, Reason: row.Reason, Text: row.Text})
+			}
+		}
 	case e.Again != nil:
 		c.source(e.Again.Source).Again++
 	case e.Started != nil:
@@ -53,9 +59,17 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 		c.watching(e)
 	case e.Adopted != nil:
 		c.adopted(e)
+	case e.Withdrawn != nil:
+		c.withdrawn(e)
+	case e.Decided != nil:
+		c.decided(e.At, e.Decided)
 	case e.Segment != nil:
-		c.remark(e.At, "A new segment began for %s (%s), by %s.",
-			strings.Join(e.Segment.Processes, ", "), e.Segment.Note, e.Segment.By)
+		since := ""
+		if t := e.Segment.Since; !t.IsZero() {
+			since = " at " + t.In(c.zone).Format("2006-01-02 15:04:05")
+		}
+		c.remark(e.At, "A new segment began%s for %s (%s), by %s.",
+			since, strings.Join(e.Segment.Processes, ", "), e.Segment.Note, e.Segment.By)
 	}
 	for i := range out.Changes {
 		ch := &out.Changes[i]
@@ -85,8 +99,16 @@ func (c *Collector) source(name string) *Source {
 
 func (c *Collector) batch(e *rules.Event) {
 	b := e.Batch
+	if len(b.Replaces) > 0 {
+		c.remark(e.At, "File %s of %s (record %d) takes the place of %s, which counts no more.", b.File, b.Source, e.Index, records(b.Replaces))
+	}
 	s := c.source(b.Source)
-	s.Files++
+	if b.Decided != nil {
+		c.decided(e.At, b.Decided)
+	}
+	if b.Decided == nil || len(b.Decided.Lines) == 0 {
+		s.Files++
+	}
 	s.Rows += len(b.Rows.Line)
 	for _, series := range b.Series {
 		s.Measurements += len(series.Value)

@@ -101,6 +101,9 @@ func (l *Log) processes(w *bytes.Buffer, zone *time.Location) {
 			m, lo, hi := figures(p.Estimate)
 			estimate, between = p.Quantity+" "+m, lo+" and "+hi
 		}
+		if p.Tests != "" {
+			estimate += "; " + p.Tests
+		}
 		last := "never"
 		if !p.LastMeasured.IsZero() {
 			last = stamp(p.LastMeasured, zone)

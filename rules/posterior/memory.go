@@ -93,6 +93,14 @@ func NewMemory(f Family, r Remember) *Memory {
 	return &Memory{family: f, remember: r, now: beforeTime}
 }
 
+// Clone is a memory that goes on by itself from here.
+func (m *Memory) Clone() *Memory {
+	c := *m
+	c.values, c.of, c.logs = slices.Clone(m.values), slices.Clone(m.of), slices.Clone(m.logs)
+	c.full, c.steps = slices.Clone(m.full), slices.Clone(m.steps)
+	return &c
+}
+
 // beforeTime is before every step of a window of time.
 const beforeTime = math.MinInt64 / 2
 
