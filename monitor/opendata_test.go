@@ -8,10 +8,10 @@ import (
 	"steelyard/rules"
 )
 
-// oxide.csv and morley.csv are dropped as they are into the running daemon. The averages,
+// oxide.csv, morley.csv and warpbreaks.csv are dropped as they are into the running daemon. The averages,
 // standard deviations and probabilities were computed with mpmath at 30 digits from the files, the
 // probability by direct convolution of one Student density with the other's tail, which is not
-// the engine's route (testdata/scripts/behrens_fisher.py). R 4.2.2 agrees on the statistics:
+// the engine's route (testdata/scripts/behrens_fisher.py, open_data_claims.py). R 4.2.2 agrees on the statistics:
 // Welch's t of oxide is -3.6302 on 51.857 degrees of freedom (stats::t.test on nlme::Oxide).
 func TestOpenData(t *testing.T) {
 	cfg := plant(t, `
@@ -21,6 +21,9 @@ name = "Tessmoor Pumpworks"
 lines = ["1", "2"]
 [characteristic.speed]
 lines = ["1", "2", "3", "4", "5"]
+[characteristic.breaks]
+family = "poisson"
+lines = ["A", "B"]
 [source.oxide]
 folder = "oxide"
 settle = "0s"
@@ -29,6 +32,10 @@ columns = { line = "source", thickness = "thickness" }
 folder = "morley"
 settle = "0s"
 columns = { line = "experiment", serial = "run", speed = "speed" }
+[source.looms]
+folder = "looms"
+settle = "0s"
+columns = { line = "wool", breaks = "breaks" }
 [[rule]]
 name = "oxide: 1 over 2"
 claim = "mean(thickness.1) - mean(thickness.2) > 0"
@@ -45,17 +52,36 @@ tell = []
 name = "morley: 1 over 5 by 20"
 claim = "mean(speed.1) - mean(speed.5) > 20"
 tell = []
+[[rule]]
+name = "morley: 1 the fastest"
+claim = "mean(speed.1) > max(mean(speed.2), mean(speed.3), mean(speed.4), mean(speed.5))"
+tell = []
+[[rule]]
+name = "morley: 1 over the others by 40"
+claim = "mean(speed.1) - (mean(speed.2) + mean(speed.3) + mean(speed.4) + mean(speed.5))/4 > 40"
+tell = []
+[[rule]]
+name = "looms: A over B"
+claim = "rate(breaks.A) / rate(breaks.B) > 1"
+tell = []
+[[rule]]
+name = "looms: A over B by a quarter"
+claim = "rate(breaks.A) / rate(breaks.B) > 1.25"
+tell = []
 `)
 	d := start(t, cfg)
-	for i, name := range []string{"oxide.csv", "morley.csv"} {
+	for i, name := range []string{"oxide.csv", "morley.csv", "warpbreaks.csv"} {
 		text, err := os.ReadFile("../testdata/data/" + name)
 		if err != nil {
 			t.Fatal(err)
 		}
 		drop(t, cfg.Sources[i].Folder, name, string(text))
 	}
-	st := d.until("both are counted", func(s *Status) bool { return s.Sources[0].Counted == 1 && s.Sources[1].Counted == 1 })
-	for i, want := range []float64{0.00036960209342633543473, 0.96214953310499740832, 0.96721289568948870659, 0.97927356191587043091} {
+	st := d.until("all are counted", func(s *Status) bool {
+		return s.Sources[0].Counted == 1 && s.Sources[1].Counted == 1 && s.Sources[2].Counted == 1
+	})
+	for i, want := range []float64{0.00036960209342633543473, 0.96214953310499740832, 0.96721289568948870659, 0.97927356191587043091,
+		0.955118680296110616376, 0.886521274529345003131, 0.999968941507223338546, 0.369383433819236014542} {
 		if got := st.Rules[i].Look.Odds().Probability(); math.Abs(got/want-1) > 1e-12 {
 			t.Errorf("%s: %.17g, want %.17g", st.Rules[i].Rule, got, want)
 		}

@@ -97,8 +97,28 @@ func (k *contrast) tail(d float64) Odds {
 		l, f := t.tail(d / k.scale[0])
 		return oddsOf(l + log(f))
 	}
+	if d > farAway*k.width() {
+		return oddsOf(k.single(func(t *student, s float64) float64 {
+			l, f := t.tail(d / s)
+			return l + log(f)
+		}))
+	}
 	m := mixture{lo: d}
 	return oddsOf(m.probability(k))
+}
+
+// farAway is so far, in scales, that a sum of Student variables gets there by one of them alone: the tails fall
+// off as powers, and two at once are rarer by 1e-200.
+const farAway = 1e100
+
+// single is the logarithm of the probability that one variable does what of takes the logarithm for.
+func (k *contrast) single(of func(t *student, scale float64) float64) float64 {
+	sum := math.Inf(-1)
+	for j := range k.n {
+		t := newStudent(k.nu[j])
+		sum = logSum(sum, of(&t, k.scale[j]))
+	}
+	return sum
 }
 
 // within is the odds of the contrast lying between lo and hi, each side integrated for itself: the
@@ -113,6 +133,8 @@ func (k *contrast) within(lo, hi float64) Odds {
 	if k.n == 1 {
 		t, s := newStudent(k.nu[0]), k.scale[0]
 		inside = t.logWindow(a/s, b/s, width/s)
+	} else if math.Min(math.Abs(a), math.Abs(b)) > farAway*k.width() {
+		inside = k.single(func(t *student, s float64) float64 { return t.logWindow(a/s, b/s, width/s) })
 	} else {
 		m := mixture{lo: a, hi: b, width: width}
 		inside = m.probability(k)

@@ -169,8 +169,11 @@ func (t *student) logWindow(lo, hi, width float64) float64 {
 		return logSum(t.logWindow(0, -lo, -lo), t.logWindow(0, hi, hi))
 	}
 	a, b := t.logTail(lo), t.logTail(hi)
-	if b-a < -math.Ln2 {
+	switch {
+	case b-a < -math.Ln2:
 		return a + log1mexp(b-a)
+	case lo > 1e100*math.Sqrt(t.nu): // where the tail is a power
+		return a + log1mexp(-float64(t.nu*log1p(width/lo)))
 	}
 	return t.logDensity(lo) + log(t.panel(lo, width))
 }
