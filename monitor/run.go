@@ -44,6 +44,14 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	if err != nil {
 		return err
 	}
+	grown := map[string][]*intake.Progress{}
+	for i := range d.cfg.Sources {
+		if src := &d.cfg.Sources[i]; growing(src) {
+			if grown[src.Name], err = d.grown(src.Name); err != nil {
+				return err
+			}
+		}
+	}
 	control, gone, err := listen(d.cfg.Site.State)
 	if err != nil {
 		return fmt.Errorf("open the socket on which the verbs reach the daemon: %w", err)
@@ -58,6 +66,10 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	arrivals := make(chan intake.Arrival, fewWait) // each holds the content of a file
 	for i := range d.cfg.Sources {
 		src := &d.cfg.Sources[i]
+		if growing(src) {
+			helpers.Go(func() { intake.Follow(ctx, src, &d.cfg.Plan, grown[src.Name], arrivals) })
+			continue
+		}
 		helpers.Go(func() { intake.Watch(ctx, src, &d.cfg.Plan, known.of(src.Name), arrivals) })
 	}
 	for _, src := range watchMarks(d.cfg) {
@@ -269,6 +281,9 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 		return happening{}, err
 	}
 	memory.Counted = old.Counted
+	if a.Progress != nil {
+		return d.stretch(a, old, memory)
+	}
 	index, source, file, found, err := d.store.Taken(a.Reading.SHA256)
 	if err != nil {
 		return happening{}, err

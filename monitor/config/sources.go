@@ -18,7 +18,7 @@ func (c *checker) sources(raw *rawFile) {
 	for _, name := range inOrder(c, "source.", raw.Source) {
 		r, key := raw.Source[name], "source."+name
 		c.name(key, name)
-		s := Source{Name: name, Files: c.pattern(key+".files", r.Files), Arrives: "whole"}
+		s := Source{Name: name, Files: c.pattern(key+".files", r.Files)}
 		if r.Folder == "" {
 			c.fault(key+".folder", "", `a folder such as "drop/rig1"`, "the source has no folder")
 		}
@@ -30,8 +30,12 @@ func (c *checker) sources(raw *rawFile) {
 		if rel, err := filepath.Rel(c.cfg.Site.State, s.Folder); err == nil && filepath.IsLocal(rel) {
 			c.fault(key+".folder", "", "a folder outside the state folder", "the drop folder %s lies in the state folder", s.Folder)
 		}
-		if r.Arrives != "" && r.Arrives != "whole" {
-			c.fault(key+".arrives", claim.Nearest(r.Arrives, []string{"whole"}), `"whole": files that grow are not read yet`, "read %q", r.Arrives)
+		ways := []string{"whole", "growing"}
+		if s.Arrives = cmp.Or(r.Arrives, "whole"); !slices.Contains(ways, s.Arrives) {
+			c.fault(key+".arrives", claim.Nearest(s.Arrives, ways), `"whole", or "growing" where a rig appends to a file`, "read %q", r.Arrives)
+		}
+		if s.Arrives == "growing" && r.Encoding == "utf-16" {
+			c.fault(key+".encoding", "", "utf-8 or windows-1252", "files that grow are not read in UTF-16")
 		}
 		s.Settle = c.duration(key+".settle", r.Settle, 2*time.Second, 0, time.Hour)
 		s.Scan = c.duration(key+".scan", r.Scan, 30*time.Second, 100*time.Millisecond, time.Hour)

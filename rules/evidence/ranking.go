@@ -149,15 +149,13 @@ func (r *ranking) integrand(j int) float64 {
 // done says whether what is left beyond the place is below 1e-17 of every P_j: to the right it is less than
 // each law's own tail, to the left less than the product of all F.
 func (r *ranking) done(side float64) bool {
-	left := r.exponent
 	for j := range r.n {
+		left := r.exponent
 		if side > 0 {
-			left = math.Inf(-1)
-			if !r.lies[j] {
-				left = r.logarithm[j]
-			} else {
+			if r.lies[j] {
 				return false
 			}
+			left = r.logarithm[j]
 		}
 		if left > -700 && !(left < log(r.p[j])-39) {
 			return false
