@@ -31,6 +31,7 @@ type Counter interface {
 	Held() ([]HeldItem, error)
 	ShowHeld(ref HeldRef) ([]HeldItem, error)
 	Decide(q Decision) (*HeldDecided, error)
+	Backup(folder string) (*Backedup, error)
 	Close() error
 }
 
@@ -155,6 +156,13 @@ func (d *Desk) handler() http.Handler {
 		if ask(w, r, &q) {
 			log, markdown, machine, err := d.WriteDayLog(q.Day)
 			reply(w, writtenLog{log, markdown, machine}, err)
+		}
+	})
+	mux.HandleFunc("POST /backup", func(w http.ResponseWriter, r *http.Request) {
+		var q struct{ Folder string }
+		if ask(w, r, &q) {
+			b, err := d.Backup(q.Folder)
+			reply(w, b, err)
 		}
 	})
 	d.handleCorrections(mux)

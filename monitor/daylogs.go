@@ -72,6 +72,11 @@ func (d *Desk) WriteDayLog(label string) (log *daylog.Log, markdown, machine str
 	if err != nil {
 		return nil, "", "", err
 	}
+	signed, err := d.store.Checkpoint()
+	if err != nil {
+		return nil, "", "", err
+	}
+	log.Checkpoint, log.Verifying = string(signed), d.store.Verifying()
 	folder := d.cfg.Site.DayLogs
 	if err := os.MkdirAll(folder, 0o755); err != nil {
 		return nil, "", "", fmt.Errorf("day log: %w", err)

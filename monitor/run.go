@@ -118,6 +118,9 @@ func (d *Desk) end(failed error) error {
 	for i := range d.cfg.Feeds {
 		d.deliverOnce(ctx, i)
 	}
+	if _, err := d.store.Checkpoint(); err != nil {
+		return err
+	}
 	return d.store.Ended(d.now())
 }
 
@@ -397,7 +400,7 @@ func (d *Desk) keepTime(ctx context.Context) {
 	tick := time.NewTicker(aliveEvery)
 	defer tick.Stop()
 	site := d.cfg.Site
-	day := daylog.DayOf(d.now(), site.Zone, site.DayStarts)
+	day, signed := daylog.DayOf(d.now(), site.Zone, site.DayStarts), d.now()
 	for {
 		select {
 		case <-ctx.Done():
@@ -407,6 +410,10 @@ func (d *Desk) keepTime(ctx context.Context) {
 		now := d.now()
 		if err := d.store.Alive(now); err != nil {
 			d.log.Error().Err(err).Msg("note that the daemon is alive")
+		}
+		if now.Sub(signed) >= signEvery {
+			d.sign()
+			signed = now
 		}
 		if now.Before(day.To) {
 			continue
@@ -454,9 +461,18 @@ func (d *Desk) deliverOnce(ctx context.Context, i int) bool {
 		if messages, _, err = d.store.Pending(name, mostTogether); err != nil || len(messages) == 0 {
 			break
 		}
-		var bodies [][]byte
-		for _, m := range messages {
-			bodies = append(bodies, m.Body)
+		var signed []byte
+		if signed, err = d.store.Checkpoint(); err != nil {
+			break
+		}
+		bodies := make([][]byte, len(messages))
+		for i, m := range messages {
+			if bodies[i], err = withCheckpoint(m.Body, signed); err != nil {
+				break
+			}
+		}
+		if err != nil {
+			break
 		}
 		if err = f.Deliver(ctx, bodies); err == nil {
 			err = d.store.Delivered(messages)

@@ -150,6 +150,13 @@ func appendLooks(b []byte, looks []rules.Look) []byte {
 	return appendFloats(b, logAgainst)
 }
 
+// Decode reads the bytes of a record, as Records gives them.
+func Decode(record []byte) (*Entry, error) { return decode(record) }
+
+// Encode writes an entry as Commit does: so the outcomes that an engine gives again can be compared with the
+// record to the last bit.
+func Encode(e *Entry) ([]byte, error) { return encode(e) }
+
 // decode reads a record.
 func decode(b []byte) (*Entry, error) {
 	if len(b) == 0 || b[0] != recordVersion && b[0] != correctedVersion {

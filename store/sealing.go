@@ -148,7 +148,7 @@ func (s *Store) makeKey() (err error) {
 	if err := writeWhole(s.beside(keySuffix), []byte(s.sealing.key+"\n")); err != nil {
 		return fmt.Errorf("%w: write the key of the journal: %w", ErrStorage, err)
 	}
-	return nil
+	return s.publish()
 }
 
 func (s *Store) readKey() error {
@@ -166,6 +166,18 @@ func (s *Store) readKey() error {
 		return fmt.Errorf("the key in %s is not that of this store; %s", path, wayOn)
 	}
 	s.sealing.key, s.sealing.verifying = key, verifying
+	return s.publish()
+}
+
+// publish puts the key to verify with beside the store, where it is not yet.
+func (s *Store) publish() error {
+	path := s.beside(publicSuffix)
+	if _, err := os.Stat(path); err == nil {
+		return nil
+	}
+	if err := writeWhole(path, []byte(s.sealing.verifying+"\n")); err != nil {
+		return fmt.Errorf("%w: write the key to verify with: %w", ErrStorage, err)
+	}
 	return nil
 }
 

@@ -94,6 +94,7 @@ type Store struct {
 	recovered string
 	sealing   sealing
 	bare      bool // without the tree: only a benchmark does so
+	toRead    bool // nothing is to be written
 
 	mu     sync.Mutex // guards what follows, for as long as it takes to read, set or stamp it
 	stamp  stamp
@@ -223,6 +224,11 @@ func (s *Store) prepare() (found string, err error) {
 	if err != nil {
 		return "", err
 	}
+	return s.readMeta()
+}
+
+// readMeta reads what is needed at all times, where the format is that of this program.
+func (s *Store) readMeta() (found string, err error) {
 	err = s.db.View(func(tx *bolt.Tx) error {
 		meta := tx.Bucket(metaBucket)
 		if found = string(meta.Get(formatKey)); found != format {
@@ -248,7 +254,7 @@ func newUUID() string {
 // Close closes the store in order.
 func (s *Store) Close() error {
 	err := s.db.Close()
-	if s.failure() == nil && err == nil {
+	if s.failure() == nil && err == nil && !s.toRead {
 		return s.restamp(func(st *stamp) { st.Open = false })
 	}
 	return err

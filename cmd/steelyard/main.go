@@ -36,6 +36,8 @@ type commandLine struct {
 	Withdraw    withdrawVerb    `cmd:"" help:"Take batches out of what counts, with a reason."`
 	Mark        markVerb        `cmd:"" help:"Start a segment: a tool was changed, new material came."`
 	Held        heldVerb        `cmd:"" help:"What was not counted and waits: list, show, decide."`
+	Verify      verifyVerb      `cmd:"" help:"Show that the record was not changed, and that every outcome follows from it."`
+	Backup      backupVerb      `cmd:"" help:"Copy the store, also while the daemon runs."`
 	Weigh       weighVerb       `cmd:"" help:"Weigh a claim once, on given figures."`
 }
 
@@ -52,6 +54,7 @@ const (
 	exitUsage         = 2
 	exitHeld          = 10 // done, but something was held
 	exitAlarm         = 11 // an alarm stands, where that was asked
+	exitNotVerified   = 12 // the record did not verify
 	exitStoreTaken    = 13
 	exitConfiguration = 78
 	exitInterrupted   = 130
@@ -113,6 +116,8 @@ func (d *desk) end(err error) int {
 		return int(silent)
 	case errors.As(err, &faults), errors.Is(err, errConfiguration):
 		return d.say(err, exitConfiguration)
+	case errors.Is(err, monitor.ErrNotVerified):
+		return d.say(err, exitNotVerified)
 	case errors.Is(err, store.ErrHeld):
 		return d.say(err, exitStoreTaken)
 	}

@@ -75,6 +75,11 @@ type Log struct {
 	Processes []rules.Standing `json:"processes"`
 	Alarms    []Alarm          `json:"alarms"` // that stood at the end
 	Caution   string           `json:"caution"`
+
+	// A signed checkpoint of the journal and the key to verify it with: a copy of this log that left the machine
+	// shows later that the journal up to there was not changed.
+	Checkpoint string `json:"checkpoint,omitempty"`
+	Verifying  string `json:"verifying,omitempty"`
 }
 
 // Source is what came from one source.

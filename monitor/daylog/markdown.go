@@ -32,6 +32,11 @@ func (l *Log) Markdown(zone *time.Location) []byte {
 	for _, r := range l.Remarks {
 		fmt.Fprintf(&w, "- %s\n", text(r))
 	}
+	if l.Checkpoint != "" {
+		section(&w, "The journal up to here", false, "")
+		fmt.Fprintf(&w, "Keep a copy of this log elsewhere: `steelyard verify --against` this file shows whether the journal was changed since.\n"+
+			"The key to verify with: `%s`\n\n```\n%s```\n", l.Verifying, l.Checkpoint)
+	}
 	return w.Bytes()
 }
 

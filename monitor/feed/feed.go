@@ -45,6 +45,10 @@ type Message struct {
 	Time            time.Time `json:"time"`
 	DataContentType string    `json:"datacontenttype"`
 	Data            Data      `json:"data"`
+
+	// Checkpoint is a signed checkpoint of the journal that covers the record told of: it is added when the
+	// message is delivered, and proves later that the journal up to there was not changed.
+	Checkpoint string `json:"checkpoint,omitempty"`
 }
 
 // Type of every message of this version.
