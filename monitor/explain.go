@@ -1,6 +1,7 @@
 package monitor
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"slices"
@@ -256,7 +257,8 @@ func (x *explainer) cross(e rules.Event, out rules.Outcomes) error {
 	}
 	for _, ch := range plan.Characteristics {
 		if slices.ContainsFunc(x.processes, func(p string) bool { return strings.HasPrefix(p, ch.Name+".") }) {
-			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember, ch.Retests.Says()})
+			x.Priors = append(x.Priors, PriorInForce{ch.Name, ch.Family, ch.Prior, ch.Remember,
+				cmp.Or(ch.Retests.Says(), "every row counts; tests of one serial are not told apart")})
 		}
 	}
 	if l, ok := x.lookIn(&e, &out); ok {

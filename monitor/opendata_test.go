@@ -128,7 +128,7 @@ func TestJournalReplays(t *testing.T) {
 // replayed drives a fresh engine with the journal and holds every outcome against the record.
 func replayed(t *testing.T, d *Desk) *rules.State {
 	t.Helper()
-	state := rules.NewState()
+	state := d.replaying()
 	err := d.store.Journal(0, d.store.Next(), func(e rules.Event, recorded rules.Outcomes) error {
 		out, err := state.Apply(&e)
 		if err != nil {
