@@ -32,6 +32,7 @@ type Counter interface {
 	ShowHeld(ref HeldRef) ([]HeldItem, error)
 	Decide(q Decision) (*HeldDecided, error)
 	Backup(folder string) (*Backedup, error)
+	Exhibit(alarm int) (page []byte, err error)
 	Close() error
 }
 
@@ -156,6 +157,13 @@ func (d *Desk) handler() http.Handler {
 		if ask(w, r, &q) {
 			log, markdown, machine, err := d.WriteDayLog(q.Day)
 			reply(w, writtenLog{log, markdown, machine}, err)
+		}
+	})
+	mux.HandleFunc("POST /exhibit", func(w http.ResponseWriter, r *http.Request) {
+		var q struct{ Alarm int }
+		if ask(w, r, &q) {
+			page, err := d.Exhibit(q.Alarm)
+			reply(w, page, err)
 		}
 	})
 	mux.HandleFunc("POST /backup", func(w http.ResponseWriter, r *http.Request) {

@@ -83,15 +83,33 @@ func (s *State) standing(c *Characteristic, line string) Standing {
 
 // Centre is the estimate of a process's centre: mean, median, proportion or rate.
 func (s *State) Centre(process string) (evidence.Interval, error) {
+	of, err := s.centreOf(process)
+	if err != nil {
+		return evidence.Interval{}, err
+	}
+	return evidence.Estimate(of, []evidence.Process{s.belief(process)})
+}
+
+// CentreAbove is the odds of a process's centre lying above x.
+func (s *State) CentreAbove(process string, x float64) (evidence.Odds, error) {
+	of, err := s.centreOf(process)
+	if err != nil {
+		return evidence.Odds{}, err
+	}
+	of.Bound = x
+	return evidence.Weigh(of, []evidence.Process{s.belief(process)})
+}
+
+// centreOf is the claim about a process's centre.
+func (s *State) centreOf(process string) (*claim.Claim, error) {
 	c, _, ok := s.plan.split(process)
 	if !ok {
-		return evidence.Interval{}, errUnknown(process)
+		return nil, errUnknown(process)
 	}
-	of := claim.Claim{
+	return &claim.Claim{
 		Kind: centre(c.Family), Form: claim.Linear, Test: claim.Above,
 		Terms: []claim.Term{{Weight: 1}}, Processes: []string{process},
-	}
-	return evidence.Estimate(&of, []evidence.Process{s.belief(process)})
+	}, nil
 }
 
 // centre is the quantity by which a family's processes are compared first.

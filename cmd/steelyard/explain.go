@@ -2,9 +2,11 @@ package main
 
 import (
 	"encoding/json"
+	"errors"
 	"fmt"
 	"io"
 	"math"
+	"os"
 	"slices"
 	"strings"
 	"text/tabwriter"
@@ -16,7 +18,8 @@ import (
 )
 
 type explainVerb struct {
-	Alarm string `arg:"" help:"The alarm: A7."`
+	Alarm   string `arg:"" help:"The alarm: A7."`
+	Exhibit string `placeholder:"FILE.html" help:"Write the page that proves itself, instead of the text."`
 }
 
 // Run shows what an alarm rests on.
@@ -30,6 +33,9 @@ func (v *explainVerb) Run(d *desk) error {
 		return err
 	}
 	defer c.Close()
+	if v.Exhibit != "" {
+		return v.writeExhibit(d, c, number)
+	}
 	x, err := c.Explain(number)
 	if err != nil {
 		return err
@@ -38,6 +44,30 @@ func (v *explainVerb) Run(d *desk) error {
 		return d.object(x)
 	}
 	return printExplanation(d.out, x, cfg.Site.Zone)
+}
+
+// writeExhibit writes the page; a file that is there is left alone.
+func (v *explainVerb) writeExhibit(d *desk, c monitor.Counter, alarm int) error {
+	page, err := c.Exhibit(alarm)
+	if err != nil {
+		return err
+	}
+	file, err := os.OpenFile(v.Exhibit, os.O_CREATE|os.O_EXCL|os.O_WRONLY, 0o644)
+	if err != nil {
+		return err
+	}
+	_, err = file.Write(page)
+	if err = errors.Join(err, file.Close()); err != nil {
+		return err
+	}
+	if d.JSON {
+		return d.object(struct {
+			Type string `json:"type"`
+			File string `json:"file"`
+		}{"exhibit", v.Exhibit})
+	}
+	_, err = fmt.Fprintf(d.out, "The exhibit of A%d is in %s. It is verified, here or elsewhere, with\n  steelyard verify %s --key FILE.pub\n", alarm, v.Exhibit, v.Exhibit)
+	return err
 }
 
 func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) error {

@@ -11,13 +11,16 @@ import (
 )
 
 type verifyVerb struct {
-	Folder  string   `arg:"" optional:"" help:"A copy of the store, such as a backup. The configuration's state folder where not given."`
+	Folder  string   `arg:"" optional:"" help:"A copy of the store, such as a backup, or an exhibit (FILE.html). The configuration's state folder where not given."`
 	Key     string   `placeholder:"FILE" help:"The key to verify with, as its holder has it (a .pub file). The store's own where not given."`
 	Against []string `placeholder:"FILE" help:"Day logs, feed files or checkpoints that left the machine; may be given several times."`
 }
 
 // Run counts the record anew and drives the engine over it.
 func (v *verifyVerb) Run(d *desk) error {
+	if v.Folder != "" && monitor.IsExhibit(v.Folder) {
+		return v.exhibit(d)
+	}
 	q := monitor.Verification{Folder: v.Folder, Key: v.Key, Against: v.Against}
 	if q.Folder == "" {
 		cfg, err := d.configuration()
@@ -48,7 +51,7 @@ func (v *verifyVerb) Run(d *desk) error {
 	if found.KeyHandedIn {
 		fmt.Fprint(d.out, ", as handed in")
 	}
-	fmt.Fprintf(d.out, ".\nCompared with %d checkpoints handed in, and one of %d records beside the store.\n", found.Checkpoints, found.Signed)
+	fmt.Fprintf(d.out, ".\nCheckpoints handed in and compared: %d; beside the store: one of %d records.\n", found.Checkpoints, found.Signed)
 	for _, o := range found.NewOrigins {
 		fmt.Fprintf(d.out, "It goes on under a new origin %s.\n", o)
 	}
@@ -56,6 +59,29 @@ func (v *verifyVerb) Run(d *desk) error {
 		fmt.Fprintf(d.out, "Not shown: %s.\n", found.NotCompared)
 	}
 	_, err = fmt.Fprintln(d.out, found.Caution)
+	return err
+}
+
+// exhibit verifies one page by itself.
+func (v *verifyVerb) exhibit(d *desk) error {
+	found, err := monitor.VerifyExhibit(v.Folder, v.Key)
+	if err != nil {
+		return err
+	}
+	if d.JSON {
+		return d.object(found)
+	}
+	fmt.Fprintf(d.out, "The exhibit of %s holds: its %d records are in the journal under a checkpoint of %d records, signed by %s.\n",
+		found.Alarm, found.Records, found.Under, found.Origin)
+	if found.Driven {
+		fmt.Fprintf(d.out, "The probability at the crossing follows from its %d rows, and the page is the one that the records make.\n", found.Rows)
+	} else {
+		fmt.Fprintf(d.out, "The page is the one that the records make; older batches are not in it, so that the probability can't be computed from it alone.\n")
+	}
+	if !found.KeyHandedIn {
+		fmt.Fprintf(d.out, "Not shown: that the key %s is the site's; hand it in with --key.\n", found.Key)
+	}
+	_, err = fmt.Fprintf(d.out, "%s\n%s\n", found.Says, found.Caution)
 	return err
 }
 

@@ -122,13 +122,14 @@ func parse(text string) (c Checkpoint, err error) {
 	if c.Size, err = strconv.ParseUint(lines[1], 10, 63); err != nil || strconv.FormatUint(c.Size, 10) != lines[1] {
 		return c, fmt.Errorf("a checkpoint's size is %q", lines[1])
 	}
-	if c.Root, err = parseHash(lines[2]); err != nil {
+	if c.Root, err = ParseHash(lines[2]); err != nil {
 		return c, fmt.Errorf("a checkpoint's root is %q", lines[2])
 	}
 	return c, nil
 }
 
-func parseHash(text string) (h Hash, err error) {
+// ParseHash reads a hash in base64, in its one form.
+func ParseHash(text string) (h Hash, err error) {
 	if h, err = tlog.ParseHash(text); err == nil && h.String() != text {
 		err = errors.New("that hash is not written in its one form")
 	}

@@ -89,7 +89,7 @@ func ParseProof(text []byte) (p Proof, err error) {
 		return Proof{}, fmt.Errorf("a proof's index is %q", lines[0])
 	}
 	for _, line := range lines[1:] {
-		h, err := parseHash(line)
+		h, err := ParseHash(line)
 		if err != nil {
 			return Proof{}, fmt.Errorf("a proof has the line %q, which is no hash", line)
 		}
