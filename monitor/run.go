@@ -24,7 +24,6 @@ import (
 const (
 	mostTogether  = 64
 	bytesTogether = 32 << 20
-	fewWait       = 8 // arrivals between the watchers and the writer
 )
 
 // aliveEvery is how often a daemon notes that it is watching, and so how exactly a stretch
@@ -63,7 +62,9 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	for i := range d.cfg.Feeds {
 		helpers.Go(func() { d.deliver(ctx, i) })
 	}
-	arrivals := make(chan intake.Arrival, fewWait) // each holds the content of a file
+	arrivals := make(chan intake.Arrival)
+	gathered := make(chan []intake.Arrival)
+	helpers.Go(func() { gather(ctx, arrivals, gathered) })
 	for i := range d.cfg.Sources {
 		src := &d.cfg.Sources[i]
 		if growing(src) {
@@ -78,7 +79,7 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	if ready != nil {
 		close(ready)
 	}
-	err = d.write(ctx, arrivals, known)
+	err = d.write(ctx, gathered, known)
 	stop()
 	err = errors.Join(err, server.Close())
 	helpers.Wait()
@@ -164,18 +165,16 @@ func (k *knownFiles) note(f store.FileMemory) {
 }
 
 // write is the one writer: it commits what arrives, as much as waits in one transaction.
-func (d *Desk) write(ctx context.Context, arrivals <-chan intake.Arrival, known *knownFiles) error {
+func (d *Desk) write(ctx context.Context, gathered <-chan []intake.Arrival, known *knownFiles) error {
 	for {
-		var list []intake.Arrival
 		select {
 		case <-ctx.Done():
 			return nil
-		case a := <-arrivals:
-			list = gather(a, arrivals)
-		}
-		for part := range apart(list) {
-			if err := d.takePart(part, known); err != nil {
-				return err
+		case list := <-gathered:
+			for part := range apart(list) {
+				if err := d.takePart(part, known); err != nil {
+					return err
+				}
 			}
 		}
 	}
@@ -215,18 +214,37 @@ func apart(list []intake.Arrival) iter.Seq[[]intake.Arrival] {
 	}
 }
 
-// gather takes what waits behind the first arrival, within bounds.
-func gather(first intake.Arrival, arrivals <-chan intake.Arrival) []intake.Arrival {
-	list, size := []intake.Arrival{first}, len(first.Content)
-	for len(list) < mostTogether && size < bytesTogether {
+// gather collects what arrives while the writer is at work, and hands it over at once: so many files as come
+// while the disk is waited for go into the next transaction. Each holds its content, so what waits is bounded.
+func gather(ctx context.Context, arrivals <-chan intake.Arrival, gathered chan<- []intake.Arrival) {
+	var list []intake.Arrival
+	size := 0
+	for {
+		from, to := arrivals, gathered
+		if len(list) == 0 {
+			to = nil
+		}
+		if len(list) >= mostTogether || size >= bytesTogether {
+			from = nil
+		}
 		select {
-		case a := <-arrivals:
-			list, size = append(list, a), size+len(a.Content)
-		default:
-			return list
+		case <-ctx.Done():
+			return
+		case a := <-from:
+			list, size = append(list, a), size+weight(&a)
+		case to <- list:
+			list, size = nil, 0
 		}
 	}
-	return list
+}
+
+// weight is about how many bytes of its file an arrival holds.
+func weight(a *intake.Arrival) int {
+	w := len(a.Content)
+	if a.Reading != nil && a.Reading.Batch != nil {
+		w = max(w, int(a.Reading.Batch.To-a.Reading.Batch.From))
+	}
+	return w
 }
 
 // take turns arrivals into events and commits them.
