@@ -13,7 +13,7 @@ import (
 // well the parts themselves are known (Uncertainty) is stated beside it and not weighed: the sum of a
 // t and a normal distribution has no closed form.
 type Offset struct {
-	Name           string             `json:"name"` // the source's, where it has one offset; else characteristic@source
+	Name           string             `json:"name"` // the source's; characteristic.source where it has several offsets
 	Source         string             `json:"source"`
 	Characteristic string             `json:"characteristic"`
 	Title          string             `json:"title,omitempty"` // of the characteristic, for people
