@@ -2,6 +2,8 @@ package rules
 
 import (
 	"errors"
+	"fmt"
+	"math"
 	"slices"
 	"strings"
 	"time"
@@ -30,6 +32,7 @@ type Standing struct {
 	Tests        string             `json:"tests,omitempty"`  // which test of a serial counts, where that was declared
 	Beyond       *Beyond            `json:"beyond,omitempty"` // readings beyond the gauge's limits, where they are counted
 	Same         int                `json:"same,omitempty"`   // the last so many values are one and the same: stuck, as declared
+	Parts        []Reference        `json:"parts,omitempty"`  // of a rig's offset, the reference parts that tell it
 }
 
 // RuleStanding is where one rule stands.
@@ -65,7 +68,8 @@ func (s *State) standing(name string, c *Characteristic) Standing {
 	p := s.processes[name]
 	_, line, _ := s.plan.split(name)
 	kind := centre(c.Family)
-	if s.plan.isOffset(name) {
+	offset, isOffset := s.plan.OffsetNamed(name)
+	if isOffset {
 		kind = claim.Bias
 	}
 	st := Standing{
@@ -74,6 +78,9 @@ func (s *State) standing(name string, c *Characteristic) Standing {
 		SegmentNote: p.SegmentNote, LastMeasured: p.LastMeasured, LastTaken: p.LastTaken, Tests: c.Retests.Says(),
 	}
 	st.Beyond, st.Same = p.beyond(), p.same()
+	if isOffset {
+		st.Parts = offset.Parts
+	}
 	q, err := s.Centre(name)
 	switch {
 	case err != nil:
@@ -84,6 +91,35 @@ func (s *State) standing(name string, c *Characteristic) Standing {
 		st.Estimate = &q
 	}
 	return st
+}
+
+// IsOffset says that this is a rig's offset, and not a process of a line.
+func (s *Standing) IsOffset() bool { return s.Quantity == string(claim.Bias) }
+
+// Notes are sentences on what to bear in mind with the figures.
+func (s *Standing) Notes() (notes []string) {
+	if b := s.Beyond; b != nil && b.N > 0 {
+		notes = append(notes, fmt.Sprintf("%s: %s of the %s readings remembered lie beyond the gauge's limits (%s %%; claims are weighed up to %s %%).",
+			s.Process, number(math.Round(b.N*10)/10), number(math.Round(b.Of*10)/10), percent(b.Share()), percent(b.AtMost)))
+	}
+	if s.Same > 0 {
+		notes = append(notes, fmt.Sprintf("%s: the last %d values are one and the same; the gauge may be stuck.", s.Process, s.Same))
+	}
+	return notes
+}
+
+// PartsText are the reference parts of an offset with what they are certified to be. How well that is
+// known adds to the uncertainty of the offset; it is stated here and not weighed.
+func (s *Standing) PartsText() string {
+	var parts []string
+	for _, p := range s.Parts {
+		text := fmt.Sprintf("%s, certified %s", p.Name, withUnit(number(p.Certified), s.Unit))
+		if p.Uncertainty > 0 {
+			text += fmt.Sprintf(" (standard uncertainty %s)", withUnit(number(p.Uncertainty), s.Unit))
+		}
+		parts = append(parts, text)
+	}
+	return strings.Join(parts, "; ")
 }
 
 // Centre is the estimate of a process's centre: mean, median, proportion or rate.
