@@ -51,6 +51,9 @@ type Desk struct {
 	failed  error             // the first storage error; nothing is committed after it
 	trouble map[string]string // of each feed: why its last delivery failed
 
+	lastCounted time.Time      // when a batch was last counted, on the monotonic clock
+	clock       *rules.Stepped // the last step of the clock on the wall since the start
+
 	told map[string]chan struct{} // a feed has messages; capacity 1
 }
 

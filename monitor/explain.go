@@ -246,8 +246,11 @@ func (x *explainer) cross(e rules.Event, out rules.Outcomes) error {
 		return fmt.Errorf("record %d raises A%d under the rule %q, which the plan then in force does not have", e.Index, x.number, c.Rule)
 	}
 	x.Rule, x.Site, x.Says = *rule, plan.Site, plan.Says(c.Rule)
-	odds := c.Look.Odds()
-	x.Crossing = Crossing{Record: e.Index, At: e.At, Probability: odds.Probability(), Contrary: odds.Contrary(), Raise: rule.Raise}
+	x.Crossing = Crossing{Record: e.Index, At: e.At, Raise: rule.Raise}
+	if c.Look != nil { // a quiet rule is raised by the clock, and looks at nothing
+		odds := c.Look.Odds()
+		x.Crossing.Probability, x.Crossing.Contrary = odds.Probability(), odds.Contrary()
+	}
 	if b := e.Batch; b != nil && len(b.Rows.Line) > 0 {
 		x.Crossing.Source, x.Crossing.File, x.Crossing.SHA256 = b.Source, b.File, b.SHA256
 		x.Crossing.Rows, x.Crossing.FirstLine, x.Crossing.LastLine = len(b.Rows.Line), b.Rows.Line[0], b.Rows.Line[len(b.Rows.Line)-1]

@@ -59,6 +59,7 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	var helpers sync.WaitGroup
 	helpers.Go(func() { _ = server.Serve(control) }) // ends with ErrServerClosed
 	helpers.Go(func() { d.keepTime(ctx) })
+	helpers.Go(func() { d.minutes(ctx) })
 	for i := range d.cfg.Feeds {
 		helpers.Go(func() { d.deliver(ctx, i) })
 	}
@@ -95,6 +96,11 @@ func (d *Desk) begin() error {
 	last, clean := d.store.LastAlive()
 	if _, err := d.commitOne(rules.Event{Started: &rules.Started{Program: Program(), Host: host, LastAlive: last, Clean: clean}}); err != nil {
 		return err
+	}
+	if now := d.now(); last.After(now.Add(leastStep)) {
+		if err := d.stepped(rules.Stepped{Was: last, Is: now}); err != nil {
+			return err
+		}
 	}
 	if err := d.store.Alive(d.now()); err != nil {
 		return err
@@ -375,6 +381,7 @@ func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
 	}
 	switch {
 	case e.Batch != nil:
+		d.lastCounted = time.Now()
 		s := note(e.Batch.Source, e.Batch.File)
 		if s.Counted++; len(e.Batch.Held) > 0 {
 			s.Held++
@@ -407,6 +414,9 @@ func (d *Desk) report(e *rules.Event, out *rules.Outcomes) {
 		}
 	}
 	plan := d.state.Plan()
+	for _, r := range out.Remarks {
+		d.log.Warn().Uint64("record", e.Index).Msg(r)
+	}
 	for i := range out.Changes {
 		c := &out.Changes[i]
 		d.log.Warn().Uint64("record", e.Index).Str("alarm", feed.ID(c)).Str("cause", string(c.Cause)).Msg(plan.Tell(c, d.cfg.Site.Zone)[0])

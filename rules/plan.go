@@ -44,6 +44,9 @@ func (p *Plan) Processes() []string {
 			names = append(names, ProcessName(c.Name, line))
 		}
 	}
+	for i := range p.Offsets {
+		names = append(names, p.Offsets[i].Name)
+	}
 	return names
 }
 
@@ -56,7 +59,7 @@ func (p *Plan) split(process string) (c *Characteristic, line string, ok bool) {
 			return c, line, true
 		}
 	}
-	return nil, "", false
+	return p.splitOffset(process)
 }
 
 // Label is what people call the characteristic.
@@ -86,7 +89,7 @@ func (p *Plan) Known(process string) (claim.Known, bool) {
 		return claim.Known{}, false
 	}
 	lower, upper := c.Limits()
-	return claim.Known{Family: c.Family, Lower: lower, Upper: upper}, true
+	return claim.Known{Family: c.Family, Lower: lower, Upper: upper, Offset: p.isOffset(process)}, true
 }
 
 // needs is how many units of a process the rule wants before it looks.
@@ -117,6 +120,12 @@ func (p *Plan) compile() ([]weighed, error) {
 		if err := c.Retests.Check(); err != nil {
 			return nil, fmt.Errorf("characteristic %q: %w", c.Name, err)
 		}
+		if err := c.Gauge.check(c.Family); err != nil {
+			return nil, fmt.Errorf("characteristic %q: %w", c.Name, err)
+		}
+	}
+	if err := p.checkOffsets(); err != nil {
+		return nil, err
 	}
 	var ready []weighed
 	seen := map[string]bool{}
@@ -125,6 +134,13 @@ func (p *Plan) compile() ([]weighed, error) {
 			return nil, fmt.Errorf("rule %q stands twice in the plan", r.Name)
 		}
 		seen[r.Name] = true
+		if r.Quiet != nil {
+			if err := r.Quiet.check(p); err != nil {
+				return nil, fmt.Errorf("rule %q: %w", r.Name, err)
+			}
+			ready = append(ready, weighed{Rule: r, claim: &claim.Claim{}, version: r.Quiet.version()})
+			continue
+		}
 		parsed, err := claim.Parse(r.Claim)
 		if err == nil {
 			parsed, err = parsed.Bind(p.Known, p.Processes())
@@ -143,7 +159,8 @@ func (p *Plan) compile() ([]weighed, error) {
 
 // version is a short fingerprint of everything that decides when a rule raises and clears:
 // its claim, thresholds and least evidence, and of each characteristic it speaks of the
-// family, limits, prior, what is remembered and which test of a serial counts. Priority and who is told are not in it.
+// family, limits, prior, what is remembered, which test of a serial counts and what is asked of the
+// gauge. Priority and who is told are not in it.
 func (p *Plan) version(r *Rule, c *claim.Claim) string {
 	type part struct {
 		Family       posterior.Family
@@ -151,11 +168,12 @@ func (p *Plan) version(r *Rule, c *claim.Claim) string {
 		Prior        posterior.Prior
 		Remember     posterior.Remember
 		Retests      Retests `json:",omitzero"`
+		Gauge        Gauge   `json:",omitzero"`
 	}
 	parts := map[string]part{}
 	for _, process := range c.Processes {
 		if ch, _, ok := p.split(process); ok {
-			parts[ch.Name] = part{ch.Family, ch.Lower, ch.Upper, ch.Prior, ch.Remember, ch.Retests}
+			parts[ch.Name] = part{ch.Family, ch.Lower, ch.Upper, ch.Prior, ch.Remember, ch.Retests, ch.Gauge}
 		}
 	}
 	text, err := json.Marshal([]any{c.String(), r.Raise, r.Clear, r.LeastUnits, r.LeastOf, parts})
@@ -172,6 +190,9 @@ func (p *Plan) RuleVersion(name string) string {
 	r, ok := p.Rule(name)
 	if !ok {
 		return ""
+	}
+	if r.Quiet != nil {
+		return r.Quiet.version()
 	}
 	c, err := claim.Parse(r.Claim)
 	if err != nil {

@@ -30,6 +30,7 @@ import (
 type Plan struct {
 	Site            string           `json:"site"`
 	Characteristics []Characteristic `json:"characteristics"`
+	Offsets         []Offset         `json:"offsets,omitempty"`
 	Rules           []Rule           `json:"rules"`
 }
 
@@ -45,6 +46,7 @@ type Characteristic struct {
 	Prior    posterior.Prior    `json:"prior"`
 	Remember posterior.Remember `json:"remember"`
 	Retests  Retests            `json:"retests,omitzero"`
+	Gauge    Gauge              `json:"gauge,omitzero"`
 }
 
 // Rule is a claim with its two thresholds, the least evidence, a priority, and who is told.
@@ -60,6 +62,7 @@ type Rule struct {
 	Tell       []string       `json:"tell,omitempty"`        // names of feeds
 	FirstCheck string         `json:"first_check,omitempty"` // what to look at first, in the site's words
 	SpreadOf   string         `json:"spread_of,omitempty"`   // the rule it was written out from
+	Quiet      *Quiet         `json:"quiet,omitempty"`       // in place of a claim, which is then empty
 }
 
 // Event is one thing that happened. Exactly one of the pointers is set. Index is the
@@ -78,6 +81,8 @@ type Event struct {
 	Watching     *Watching     `json:"watching,omitempty"`
 	Withdrawn    *Withdrawn    `json:"withdrawn,omitempty"`
 	Decided      *Decided      `json:"decided,omitempty"`
+	Moment       *Moment       `json:"moment,omitempty"`
+	Stepped      *Stepped      `json:"stepped,omitempty"`
 }
 
 // Started says that a program began to watch.
@@ -111,7 +116,10 @@ type Batch struct {
 	Written time.Time `json:"written,omitzero"` // the file's modification time
 	Rows    Rows      `json:"rows"`
 	Series  []Series  `json:"series"`
-	Held    []HeldRow `json:"held,omitempty"` // rows of the same file that were not counted
+	Held    []HeldRow `json:"held,omitempty"`    // rows of the same file that were not counted
+	Aside   []Aside   `json:"aside,omitempty"`   // rows of the same file that were left out as declared
+	Remarks []string  `json:"remarks,omitempty"` // sentences on what had to be decided to read the file
+	Ignored []string  `json:"ignored,omitempty"` // columns of the file that nothing is mapped to
 
 	// Replaces are batches that this one takes the place of: they are withdrawn with it.
 	Replaces []uint64 `json:"replaces,omitempty"`
@@ -127,12 +135,14 @@ type Rows struct {
 	Serial []string `json:"serial,omitempty"` // of the unit
 }
 
-// Series are the values of one process in a batch. Of is nil where it is 1 throughout.
+// Series are the values of one process in a batch. Of is nil where it is 1 throughout. Of an Offset,
+// a value is what was read of a reference part minus what that part is certified to be.
 type Series struct {
 	Process string    `json:"process"`
-	Row     []int     `json:"row"`          // index into Rows, ascending
-	Value   []float64 `json:"value"`        // normal, lognormal: value; binomial: counted; poisson: count
-	Of      []float64 `json:"of,omitempty"` // binomial: of how many; poisson: exposure
+	Row     []int     `json:"row"`              // index into Rows, ascending
+	Value   []float64 `json:"value"`            // normal, lognormal: value; binomial: counted; poisson: count
+	Of      []float64 `json:"of,omitempty"`     // binomial: of how many; poisson: exposure
+	Beyond  []Bound   `json:"beyond,omitempty"` // readings that the gauge could only bound; Row ascending
 }
 
 // Held is a file that was not counted, with the reason.
@@ -272,6 +282,7 @@ type Change struct {
 	Cause    Cause              `json:"cause"`
 	At       time.Time          `json:"at"`
 	Look     *Look              `json:"look,omitempty"` // of a raise or clear
+	Since    time.Time          `json:"since,omitzero"` // of a quiet rule that raised: when something was last counted
 	Quantity *evidence.Interval `json:"quantity,omitempty"`
 	Units    []Units            `json:"units,omitempty"`
 	Source   string             `json:"source,omitempty"` // of the batch that did it

@@ -74,6 +74,7 @@ func (s *State) CheckSegment(e *Event) error {
 func (p *process) startSegment(e *Event, name string, h History, out func(index uint64) bool) error {
 	began := p.Began
 	p.memory.StartSegment()
+	p.startGauge()
 	p.Segment++
 	p.Began, p.SegmentNote = e.Index, e.Segment.Note
 	p.SegmentSince, p.SegmentFrom = e.At, e.Segment.Since
@@ -92,6 +93,7 @@ func (p *process) startSegment(e *Event, name string, h History, out func(index 
 		for i := range old.Batch.Series {
 			if series := &old.Batch.Series[i]; series.Process == name {
 				p.remember(old, series, timesOf(old, series))
+				p.gauged(old, series)
 			}
 		}
 		return nil

@@ -114,6 +114,8 @@ type tally struct {
 	replaced int // whose earlier test counts no more
 	outside  int // retests of units from before the segment; they don't count in it
 
+	stuck string // a sentence, where the gauge begins to look stuck
+
 	changed []uint64 // batches of tests that are not as they were
 	settled bool     // base is not as it was
 }
@@ -251,6 +253,9 @@ func (n *tally) remarks(p *process, e *Event, series *Series) (list []string) {
 			list = append(list, fmt.Sprintf("%s: %d of %d measurements of file %s of %s %s",
 				series.Process, count, len(series.Value), e.Batch.File, e.Batch.Source, what))
 		}
+	}
+	if n.stuck != "" {
+		list = append(list, n.stuck)
 	}
 	say(n.before, fmt.Sprintf("were made before its segment began (%s) and do not count in it", p.SegmentFrom.Format(time.RFC3339)))
 	says := " (" + p.Retests.Says() + ")"

@@ -1,6 +1,9 @@
 package rules
 
 import (
+	"errors"
+	"fmt"
+	"math"
 	"slices"
 	"strings"
 	"time"
@@ -26,7 +29,10 @@ type Standing struct {
 	SegmentNote  string             `json:"segment_note,omitempty"`
 	LastMeasured time.Time          `json:"last_measured,omitzero"`
 	LastTaken    time.Time          `json:"last_taken,omitzero"`
-	Tests        string             `json:"tests,omitempty"` // which test of a serial counts, where that was declared
+	Tests        string             `json:"tests,omitempty"`  // which test of a serial counts, where that was declared
+	Beyond       *Beyond            `json:"beyond,omitempty"` // readings beyond the gauge's limits, where they are counted
+	Same         int                `json:"same,omitempty"`   // the last so many values are one and the same: stuck, as declared
+	Parts        []Reference        `json:"parts,omitempty"`  // of a rig's offset, the reference parts that tell it
 }
 
 // RuleStanding is where one rule stands.
@@ -44,30 +50,36 @@ type RuleStanding struct {
 	Raised   time.Time  `json:"raised,omitzero"`
 	Look     *Look      `json:"look,omitempty"` // the last one
 	LookAt   time.Time  `json:"look_at,omitzero"`
+	Quiet    *Quiet     `json:"quiet,omitempty"`  // of a rule that waits for something to be counted
+	Counted  time.Time  `json:"counted,omitzero"` // when something was, last
 }
 
 // Plan is a copy of the plan in force.
 func (s *State) Plan() Plan { return s.plan }
 
-// Standings are where the plan's processes stand, in its order.
+// Standings are where the plan's processes stand, in its order, and behind them the rigs' offsets.
 func (s *State) Standings() []Standing {
 	var all []Standing
-	for _, c := range s.plan.Characteristics {
-		for _, line := range c.Lines {
-			all = append(all, s.standing(&c, line))
-		}
-	}
+	s.plan.each(func(name string, c *Characteristic) { all = append(all, s.standing(name, c)) })
 	return all
 }
 
-func (s *State) standing(c *Characteristic, line string) Standing {
-	name := ProcessName(c.Name, line)
+func (s *State) standing(name string, c *Characteristic) Standing {
 	p := s.processes[name]
+	_, line, _ := s.plan.split(name)
 	kind := centre(c.Family)
+	offset, isOffset := s.plan.OffsetNamed(name)
+	if isOffset {
+		kind = claim.Bias
+	}
 	st := Standing{
 		Process: name, Label: c.Label(), Line: line, Unit: c.Unit, Quantity: string(kind),
 		Units: units(p), Taken: p.Taken, Segment: p.Segment, SegmentSince: p.SegmentSince,
 		SegmentNote: p.SegmentNote, LastMeasured: p.LastMeasured, LastTaken: p.LastTaken, Tests: c.Retests.Says(),
+	}
+	st.Beyond, st.Same = p.beyond(), p.same()
+	if isOffset {
+		st.Parts = offset.Parts
 	}
 	q, err := s.Centre(name)
 	switch {
@@ -79,6 +91,35 @@ func (s *State) standing(c *Characteristic, line string) Standing {
 		st.Estimate = &q
 	}
 	return st
+}
+
+// IsOffset says that this is a rig's offset, and not a process of a line.
+func (s *Standing) IsOffset() bool { return s.Quantity == string(claim.Bias) }
+
+// Notes are sentences on what to bear in mind with the figures.
+func (s *Standing) Notes() (notes []string) {
+	if b := s.Beyond; b != nil && b.N > 0 {
+		notes = append(notes, fmt.Sprintf("%s: %s of the %s readings remembered lie beyond the gauge's limits (%s %%; claims are weighed up to %s %%).",
+			s.Process, number(math.Round(b.N*10)/10), number(math.Round(b.Of*10)/10), percent(b.Share()), percent(b.AtMost)))
+	}
+	if s.Same > 0 {
+		notes = append(notes, fmt.Sprintf("%s: the last %d values are one and the same; the gauge may be stuck.", s.Process, s.Same))
+	}
+	return notes
+}
+
+// PartsText are the reference parts of an offset with what they are certified to be. How well that is
+// known adds to the uncertainty of the offset; it is stated here and not weighed.
+func (s *Standing) PartsText() string {
+	var parts []string
+	for _, p := range s.Parts {
+		text := fmt.Sprintf("%s, certified %s", p.Name, withUnit(number(p.Certified), s.Unit))
+		if p.Uncertainty > 0 {
+			text += fmt.Sprintf(" (standard uncertainty %s)", withUnit(number(p.Uncertainty), s.Unit))
+		}
+		parts = append(parts, text)
+	}
+	return strings.Join(parts, "; ")
 }
 
 // Centre is the estimate of a process's centre: mean, median, proportion or rate.
@@ -105,6 +146,9 @@ func (s *State) centreOf(process string) (*claim.Claim, error) {
 	c, _, ok := s.plan.split(process)
 	if !ok {
 		return nil, errUnknown(process)
+	}
+	if why := s.censored([]string{process}); why != "" {
+		return nil, errors.New(why)
 	}
 	return &claim.Claim{
 		Kind: centre(c.Family), Form: claim.Linear, Test: claim.Above,
@@ -146,7 +190,7 @@ func (s *State) RuleStandings() []RuleStanding {
 		st := RuleStanding{
 			Rule: r.Name, Version: r.version, Claim: r.Claim, Says: s.plan.Says(r.Name), Priority: r.Priority,
 			Raise: r.Raise, Clear: r.Clear, State: a.State, Since: a.Since, Alarm: a.Number, Raised: a.Raised,
-			LookAt: a.LastAt,
+			LookAt: a.LastAt, Quiet: r.Quiet, Counted: a.Counted,
 		}
 		if a.Last != nil {
 			look := *a.Last

@@ -48,6 +48,7 @@ type process struct {
 	LastMeasured time.Time          `json:"last_measured,omitzero"`
 	LastTaken    time.Time          `json:"last_taken,omitzero"`
 	Memory       []byte             `json:"memory"`
+	Gauge        *gauge             `json:"gauge,omitempty"` // nil where nothing is asked of the gauge
 
 	memory *posterior.Memory
 	tests  *tests // nil where no serial is known
@@ -63,7 +64,8 @@ type alarm struct {
 	Version  string     `json:"version"`
 	Last     *Look      `json:"last,omitempty"`
 	LastAt   time.Time  `json:"last_at,omitzero"`
-	LookedAt uint64     `json:"looked_at"` // event of the last look
+	LookedAt uint64     `json:"looked_at"`        // event of the last look
+	Counted  time.Time  `json:"counted,omitzero"` // of a quiet rule: when something was last counted
 }
 
 type counters struct {
@@ -246,7 +248,9 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 		return s.applyWithdrawn(e)
 	case e.Decided != nil:
 		return Outcomes{}, s.decide(e, e.Decided)
-	case e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
+	case e.Moment != nil:
+		return s.applyMoment(e)
+	case e.Stepped != nil, e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
 		return Outcomes{}, nil
 	}
 	return Outcomes{}, fmt.Errorf("event %d says nothing that the engine knows", e.Index)
@@ -269,6 +273,9 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 					e.Batch.Source, e.Batch.File, e.Batch.Rows.Line[series.Row[i]], err)
 			}
 		}
+		if err := s.acceptsBeyond(e.Batch, &series); err != nil {
+			return Outcomes{}, err
+		}
 	}
 	due := map[string]bool{}
 	decision := e.Batch.Decided
@@ -276,6 +283,8 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 		if err := s.checkDecision(e, decision); err != nil {
 			return Outcomes{}, err
 		}
+	} else if err := s.unlikely(e.Batch); err != nil {
+		return Outcomes{}, err
 	}
 	if len(e.Batch.Replaces) > 0 {
 		var err error
@@ -296,6 +305,7 @@ func (s *State) applyBatch(e *Event) (Outcomes, error) {
 		s.take(e, &e.Batch.Series[i], &out)
 	}
 	s.lookAt(e, due, &out)
+	s.heard(e, &out)
 	return out, nil
 }
 
@@ -340,10 +350,13 @@ func (p *process) take(e *Event, series *Series) (n tally) {
 			p.LastMeasured = last
 		}
 	}
+	stuck := p.gauged(e, series)
 	if p.tests != nil {
-		return p.test(e, series, times)
+		n = p.test(e, series, times)
+	} else {
+		n.before = p.remember(e, series, times)
 	}
-	n.before = p.remember(e, series, times)
+	n.stuck = stuck
 	return n
 }
 
@@ -422,34 +435,36 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 // fitProcesses makes a process for each the plan has, and starts one anew whose family or
 // way of remembering has changed: what it held does not answer the new question.
 func (s *State) fitProcesses(e *Event, out *Outcomes) {
-	for _, c := range s.plan.Characteristics {
-		for _, line := range c.Lines {
-			name := ProcessName(c.Name, line)
-			old := s.processes[name]
-			p := fitted(old, &c, e.Index)
-			if p == old {
-				continue
-			}
-			if old != nil {
-				out.Remarks = append(out.Remarks, fmt.Sprintf(
-					"%s: its family, what it remembers or which test of a serial counts has changed, so its evidence starts anew", name))
-			}
-			gone := old.allTests()
-			s.processes[name] = p
+	s.plan.each(func(name string, c *Characteristic) {
+		old := s.processes[name]
+		if old != nil && old.asked() != c.Gauge {
 			s.touched[processPiece+name] = true
-			s.testsChanged(name, gone, true)
 		}
-	}
+		p := fitted(old, c, e.Index)
+		if p == old {
+			return
+		}
+		if old != nil {
+			out.Remarks = append(out.Remarks, fmt.Sprintf(
+				"%s: its family, what it remembers or which test of a serial counts has changed, so its evidence starts anew", name))
+		}
+		gone := old.allTests()
+		s.processes[name] = p
+		s.touched[processPiece+name] = true
+		s.testsChanged(name, gone, true)
+	})
 }
 
 // fitted is the process as a characteristic now wants it: itself where it fits, else one that
 // starts anew with the event. There may have been none before.
 func fitted(old *process, c *Characteristic, event uint64) *process {
 	if old != nil && old.Family == c.Family && old.Remember == c.Remember && old.Retests == c.Retests {
+		old.fitGauge(c)
 		return old
 	}
 	p := &process{Family: c.Family, Remember: c.Remember, Retests: c.Retests, Began: event}
 	p.memory, p.tests = posterior.NewMemory(c.Family, c.Remember), newTests(p)
+	p.fitGauge(c)
 	if old != nil {
 		p.Taken, p.Batches, p.Segment = old.Taken, old.Batches, old.Segment+1
 		p.LastMeasured, p.LastTaken = old.LastMeasured, old.LastTaken
@@ -523,6 +538,10 @@ func (s *State) step(e *Event, rule string, to AlarmState, c Change, out *Outcom
 // look evaluates rule i and moves its alarm.
 func (s *State) look(e *Event, i int, out *Outcomes) {
 	r := &s.ready[i]
+	if r.Quiet != nil {
+		s.listen(e, i)
+		return
+	}
 	a := s.alarms[r.Name]
 	s.age(e, r.claim)
 	look := s.weigh(i)
@@ -552,7 +571,7 @@ func (s *State) look(e *Event, i int, out *Outcomes) {
 // on the window as it is at the event, also for a line that is idle.
 func (s *State) age(e *Event, c *claim.Claim) {
 	for _, name := range c.Processes {
-		if s.processes[name].memory.Pass(e.At.UnixNano()) {
+		if s.processes[name].pass(e.At) {
 			s.touched[processPiece+name] = true
 		}
 	}
@@ -601,6 +620,9 @@ func (s *State) weigh(i int) Look {
 			return Look{Rule: i, Withheld: fmt.Sprintf("%s has %s of the %s units the rule waits for",
 				name, number(n), number(need))}
 		}
+	}
+	if why := s.censored(r.claim.Processes); why != "" {
+		return Look{Rule: i, Withheld: why}
 	}
 	odds, err := evidence.Weigh(r.claim, s.believed(r.claim))
 	if err != nil {

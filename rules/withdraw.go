@@ -162,14 +162,11 @@ func (r *rebuilding) begin(name string, before uint64) error {
 func (r *rebuilding) add(old *Event) error {
 	switch {
 	case old.Adopted != nil:
-		for i := range old.Adopted.Plan.Characteristics {
-			c := &old.Adopted.Plan.Characteristics[i]
-			for _, line := range c.Lines {
-				if name := ProcessName(c.Name, line); r.concerns(name, old) {
-					r.processes[name] = fitted(r.processes[name], c, old.Index)
-				}
+		old.Adopted.Plan.each(func(name string, c *Characteristic) {
+			if r.concerns(name, old) {
+				r.processes[name] = fitted(r.processes[name], c, old.Index)
 			}
-		}
+		})
 	case old.Segment != nil:
 		for _, name := range old.Segment.Processes {
 			if !r.concerns(name, old) {

@@ -22,6 +22,9 @@ func (p *Plan) Says(rule string) string {
 	if !ok {
 		return rule
 	}
+	if r.Quiet != nil {
+		return r.Quiet.says()
+	}
 	c, err := claim.Parse(r.Claim)
 	if err == nil {
 		c, err = c.Bind(p.Known, p.Processes())
@@ -37,7 +40,7 @@ func (p *Plan) Statement(c *claim.Claim) string {
 	t := teller{c: c}
 	for _, process := range c.Processes {
 		ch, line, ok := p.split(process)
-		if !ok || (t.ch != nil && t.ch != ch) {
+		if !ok || (t.ch != nil && t.ch != ch && c.Kind != claim.Bias) {
 			return fmt.Sprintf("%s holds", c)
 		}
 		t.ch = ch
@@ -230,6 +233,9 @@ func (p *Plan) Tell(c *Change, zone *time.Location) []string {
 	says := p.Says(c.Rule)
 	at := c.At.In(zone).Format("15:04:05 on 2006-01-02")
 	var told []string
+	if r, ok := p.Rule(c.Rule); ok && r.Quiet != nil && (c.Cause == Raised || c.Cause == Cleared) {
+		return append(r.tellQuiet(c, zone), ReleaseNote)
+	}
 	switch c.Cause {
 	case Raised:
 		told = append(told, says+".", p.how(c)+".")

@@ -16,14 +16,15 @@ import (
 //
 //	version  1 byte: 2, or 3 where it says what programs of version 2 do not know: a withdrawal, a
 //	         batch that replaces others, a decision on what was held, a segment from a moment on, a plan
-//	         that says which test of a serial counts
+//	         that says which test of a serial counts; or 4 (rowsVersion) where neither knows what it says
 //	head     its length (uvarint), then a JSON array of two objects, the event and the
 //	         outcomes, with the names of package rules, but without what follows here; floats
 //	         in the shortest form that reads back to the same bits, times in RFC 3339, UTC
 //	rows     only where the event is a batch: columns Line (whole numbers), Time (times),
 //	         Serial (texts)
 //	series   only where the event is a batch: their number + 1, or 0 for nil (uvarint), and of
-//	         each the columns Process (texts, of one), Row (whole numbers), Value and Of (floats)
+//	         each the columns Process (texts, of one), Row (whole numbers), Value and Of (floats); in
+//	         version 4 then Beyond: Row (whole numbers), Limit (floats), Above (whole numbers, 0 or 1)
 //	looks    columns Rule (whole numbers), Withheld (texts), LogFor and LogAgainst (floats)
 //
 // The columns are drawn in columns.go. Nothing follows the looks. A reader refuses a version
@@ -40,6 +41,8 @@ const (
 func versionOf(e *rules.Event) byte {
 	knowsSerials := func(c rules.Characteristic) bool { return c.Retests != rules.Retests{} }
 	switch {
+	case saysMore(e):
+		return rowsVersion
 	case e.Adopted != nil && slices.ContainsFunc(e.Adopted.Plan.Characteristics, knowsSerials):
 		return correctedVersion
 	case e.Withdrawn != nil, e.Decided != nil, e.Batch != nil && e.Batch.Decided != nil, e.Batch != nil && len(e.Batch.Replaces) > 0, e.Segment != nil && !e.Segment.Since.IsZero():
@@ -86,7 +89,7 @@ func encode(e *Entry) ([]byte, error) {
 	b = binary.AppendUvarint(b, uint64(text.Len()))
 	b = append(b, text.Bytes()...)
 	if event.Batch != nil {
-		b = appendBatch(b, event.Batch)
+		b = appendBatch(b, event.Batch, b[0])
 	}
 	return appendLooks(b, outcomes.Looks), nil
 }
@@ -101,11 +104,15 @@ func inUTC(e *Entry) (rules.Event, rules.Outcomes) {
 	set(&event.Segment, func(s *rules.Segment) *time.Time { return &s.Since })
 	set(&event.Withdrawn, func(w *rules.Withdrawn) *time.Time { return &w.From })
 	set(&event.Withdrawn, func(w *rules.Withdrawn) *time.Time { return &w.To })
+	set(&event.Moment, func(m *rules.Moment) *time.Time { return &m.Since })
+	set(&event.Stepped, func(s *rules.Stepped) *time.Time { return &s.Was })
+	set(&event.Stepped, func(s *rules.Stepped) *time.Time { return &s.Is })
 	if outcomes.Changes != nil {
 		outcomes.Changes = append(make([]rules.Change, 0, len(outcomes.Changes)), outcomes.Changes...)
 	}
 	for i := range outcomes.Changes {
 		outcomes.Changes[i].At = outcomes.Changes[i].At.UTC()
+		outcomes.Changes[i].Since = outcomes.Changes[i].Since.UTC()
 	}
 	return event, outcomes
 }
@@ -120,7 +127,7 @@ func set[T any](p **T, at func(*T) *time.Time) {
 	*p = &c
 }
 
-func appendBatch(b []byte, batch *rules.Batch) []byte {
+func appendBatch(b []byte, batch *rules.Batch, version byte) []byte {
 	b = appendInts(b, batch.Rows.Line)
 	b = appendTimes(b, batch.Rows.Time)
 	b = appendTexts(b, batch.Rows.Serial)
@@ -131,6 +138,9 @@ func appendBatch(b []byte, batch *rules.Batch) []byte {
 		b = appendInts(b, s.Row)
 		b = appendFloats(b, s.Value)
 		b = appendFloats(b, s.Of)
+		if version == rowsVersion {
+			b = appendBeyond(b, s.Beyond)
+		}
 	}
 	return b
 }
@@ -159,8 +169,8 @@ func Encode(e *Entry) ([]byte, error) { return encode(e) }
 
 // decode reads a record.
 func decode(b []byte) (*Entry, error) {
-	if len(b) == 0 || b[0] != recordVersion && b[0] != correctedVersion {
-		return nil, fmt.Errorf("its version is not one of those that this program reads, %d and %d", recordVersion, correctedVersion)
+	if len(b) == 0 || b[0] < recordVersion || b[0] > rowsVersion {
+		return nil, fmt.Errorf("its version is not one of those that this program reads, %d to %d", recordVersion, rowsVersion)
 	}
 	c := &columns{rest: b[1:]}
 	text := c.take(c.uvarint())
@@ -177,7 +187,7 @@ func decode(b []byte) (*Entry, error) {
 		if e.Event.Batch = head.Batch.Batch; e.Event.Batch == nil {
 			e.Event.Batch = &rules.Batch{}
 		}
-		readBatch(c, e.Event.Batch)
+		readBatch(c, e.Event.Batch, b[0])
 	}
 	e.Outcomes.Looks = readLooks(c)
 	if c.err == nil && len(c.rest) > 0 {
@@ -186,7 +196,7 @@ func decode(b []byte) (*Entry, error) {
 	return e, c.err
 }
 
-func readBatch(c *columns, batch *rules.Batch) {
+func readBatch(c *columns, batch *rules.Batch, version byte) {
 	batch.Rows = rules.Rows{Line: c.ints(), Time: c.times(), Serial: c.texts()}
 	n, isNil := c.count()
 	if isNil {
@@ -201,6 +211,9 @@ func readBatch(c *columns, batch *rules.Batch) {
 			c.fail("a series has %d names", len(name))
 		}
 		s.Row, s.Value, s.Of = c.ints(), c.floats(), c.floats()
+		if version == rowsVersion {
+			s.Beyond = readBeyond(c)
+		}
 		if c.err != nil {
 			return
 		}

@@ -4,13 +4,11 @@ import (
 	"fmt"
 	"os"
 	"path/filepath"
-	"slices"
 	"strings"
 	"time"
 
 	"steelyard/monitor/config"
 	"steelyard/monitor/intake"
-	"steelyard/rules"
 )
 
 type checkVerb struct {
@@ -68,63 +66,17 @@ func (v *checkVerb) file(d *desk, cfg *config.Config, name string) (held bool, e
 	if err != nil {
 		return false, err
 	}
-	reading := intake.NewReader(src, &cfg.Plan).Read(filepath.Base(name), info.ModTime(), content)
+	reader := intake.NewReader(src, &cfg.Plan)
+	reader.Arriving(time.Now) // as if it were dropped now
+	r := readSample(cfg, src, name, reader.Read(filepath.Base(name), info.ModTime(), content))
 	if d.JSON {
-		return reading.Held != nil || len(reading.Batch.Held) > 0, d.object(struct {
-			Type   string       `json:"type"`
-			File   string       `json:"file"`
-			Source string       `json:"source"`
-			Batch  *rules.Batch `json:"batch,omitempty"`
-			Held   *rules.Held  `json:"held,omitempty"`
-		}{"reading", name, src.Name, reading.Batch, reading.Held})
-	}
-	rows := []rules.HeldRow(nil)
-	if reading.Held != nil {
-		d.line("\n%s, as source %s reads it: HELD WHOLE\n  %s", name, src.Name, reading.Held.Reason)
-		rows = reading.Held.Rows
-	} else {
-		v.counted(d, cfg, src, name, reading.Batch)
-		rows = reading.Batch.Held
-	}
-	for _, r := range rows {
-		d.line("  line %d HELD: %s\n    it reads: %s", r.Line, r.Reason, r.Text)
-	}
-	return reading.Held != nil || len(rows) > 0, nil
-}
-
-func (v *checkVerb) counted(d *desk, cfg *config.Config, src *config.Source, name string, b *rules.Batch) {
-	d.line("\n%s, as source %s reads it: %d rows counted, %d held", name, src.Name, len(b.Rows.Line), len(b.Held))
-	for _, s := range b.Series {
-		low, high := slices.Min(s.Value), slices.Max(s.Value)
-		d.line("  %s: %d values from %v to %v %s", s.Process, len(s.Value), low, high, unitOf(cfg, s.Process))
-	}
-	if !v.Rows {
-		return
-	}
-	for i, line := range b.Rows.Line {
-		text := fmt.Sprintf("  line %d:", line)
-		if b.Rows.Time != nil {
-			text += " " + time.Unix(0, b.Rows.Time[i]).In(src.Form.Zone).Format(time.RFC3339)
+		if !v.Rows {
+			r.Rows = nil
 		}
-		if b.Rows.Serial != nil {
-			text += " " + b.Rows.Serial[i]
-		}
-		for _, s := range b.Series {
-			if j, ok := slices.BinarySearch(s.Row, i); ok {
-				text += fmt.Sprintf(" %s = %v", s.Process, s.Value[j])
-			}
-		}
-		d.line("%s", text)
+		return r.anyHeld(), d.object(r)
 	}
-}
-
-func unitOf(cfg *config.Config, process string) string {
-	for _, c := range cfg.Plan.Characteristics {
-		if strings.HasPrefix(process, c.Name+".") {
-			return c.Unit
-		}
-	}
-	return ""
+	r.print(d, v.Rows)
+	return r.anyHeld(), nil
 }
 
 // source finds the source that reads a sample file.

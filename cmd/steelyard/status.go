@@ -56,13 +56,21 @@ func printStatus(w io.Writer, st *monitor.Status, zone *time.Location) error {
 	t := tabwriter.NewWriter(w, 0, 4, 2, ' ', 0)
 	fmt.Fprintln(t, "\nRules\tprobability\todds\traise\tclear\tstate\tlast look")
 	for _, r := range st.Rules {
+		if r.Quiet != nil {
+			fmt.Fprintf(t, "  %s\t-\twaits %s\t-\t-\t%s\tlast counted %s\n", r.Rule, r.Quiet.For, r.State, clock(r.Counted, zone))
+			continue
+		}
 		p, odds, at := lookCells(&r, zone)
 		fmt.Fprintf(t, "  %s\t%s\t%s\t%v\t%v\t%s\t%s\n", r.Rule, p, odds, r.Raise, r.Clear, r.State, at)
 	}
 	fmt.Fprintln(t, "\nProcesses\tunits\testimate\t95 % between\tunit\tlast measured")
 	for _, p := range st.Processes {
+		if p.IsOffset() {
+			continue // printRigs
+		}
 		fmt.Fprintf(t, "  %s\t%s\t%s\t%s\n", p.Process, units(p.Units), estimateCells(&p), measuredCell(&p, zone))
 	}
+	printRigs(t, st, zone)
 	if st.Watching {
 		fmt.Fprintln(t, "\nSources\tfiles counted\twith something held\tcame again\tlast file\t")
 		for _, s := range st.Sources {
@@ -80,6 +88,7 @@ func printStatus(w io.Writer, st *monitor.Status, zone *time.Location) error {
 	if h := st.Waiting; h.Files+h.Rows > 0 {
 		fmt.Fprintf(w, "\nHeld, and waiting for a decision: files %d, rows of others %d. steelyard held lists them.\n", h.Files, h.Rows)
 	}
+	printNotes(w, st, zone)
 	_, err := fmt.Fprintln(w, "\n"+st.Caution)
 	return err
 }

@@ -39,6 +39,7 @@ func (c *checker) characteristics(raw *rawFile) {
 		ch.Remember = c.remember(key+".remember", r.Remember)
 		ch.Prior = c.prior(key+".prior", r.Prior, ch.Family)
 		ch.Retests = c.retests(key, r.Retests, r.Serials)
+		ch.Gauge = c.gauge(key, &r, ch.Family)
 		c.cfg.Plan.Characteristics = append(c.cfg.Plan.Characteristics, ch)
 	}
 	if len(raw.Characteristic) == 0 {

@@ -19,8 +19,9 @@ type Config struct {
 	Digest  string // SHA-256 of the file, hexadecimal
 	Site    Site
 	Plan    rules.Plan
-	Sources []Source // in the order of the file
-	Feeds   []Feed   // in the order of the file
+	Sources []Source          // in the order of the file
+	Feeds   []Feed            // in the order of the file
+	Runs    map[string]Rhythm // when a line runs; a line that is not named runs always
 
 	// Marks is the folder of marks, watched as a source is; nil where there is none. Nothing in
 	// it is measured: its Columns are empty.
@@ -61,6 +62,13 @@ type Source struct {
 	Resent  string        // other content under a name that was counted: "hold", "add" or "replace"
 	Form    Form
 	Columns Columns
+
+	Faults   FaultCodes
+	Variants Variants
+	Parts    []Part        // reference parts that the source may measure
+	Ahead    time.Duration // a row measured later than this beyond its arrival is held; above 0
+	Behind   time.Duration // a row measured longer than this before its arrival is held; 0: none is
+	Present  string        // name of a file that is always in the folder: without it, it is another; "": none
 }
 
 // Form is how the text of a file is to be taken.
@@ -95,4 +103,6 @@ type Measured struct {
 	Scale, Offset  float64  // 1 and 0 by default
 	Lower, Upper   float64  // plausible values, in the characteristic's unit; -Inf, +Inf where not declared
 	Pass, Fail     []string // binomial by words: texts that count 0 and 1; nil where numbers are written
+	Beyond         bool     // ">200" is a reading beyond the gauge's limit
+	Variant        string   // of the rows it is read from; "": of those that Variants.Count names, or all
 }

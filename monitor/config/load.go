@@ -49,6 +49,9 @@ func Parse(name string, text []byte, base string) (*Config, error) {
 	c.sources(raw)
 	c.marks(raw)
 	c.retestsHaveSerials()
+	c.censored(raw)
+	c.references(raw)
+	c.lines(raw)
 	c.rules(raw)
 	if len(c.faults) > 0 {
 		return nil, c.faults.sorted()
@@ -252,6 +255,10 @@ func (c *checker) rule(key string, r *rawRule) []rules.Rule {
 		c.fault(key+".priority", claim.Nearest(out.Priority, priorities), `"low", "medium" or "high"`, "read %q", out.Priority)
 	}
 	c.tell(key, r)
+	if c.has(key + ".quiet") {
+		return c.quiet(key, out, r)
+	}
+	c.onlyQuiet(key)
 	parsed, err := claim.Parse(r.Claim)
 	if err != nil {
 		c.claimFault(key+".claim", err)

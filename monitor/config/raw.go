@@ -17,6 +17,8 @@ type rawFile struct {
 	Site           rawSite                      `toml:"site"`
 	Characteristic map[string]rawCharacteristic `toml:"characteristic"`
 	Source         map[string]rawSource         `toml:"source"`
+	Reference      map[string]rawReference      `toml:"reference"`
+	Line           map[string]rawLine           `toml:"line"`
 	Rule           []rawRule                    `toml:"rule"`
 	Feed           map[string]rawFeed           `toml:"feed"`
 	Marks          *rawMarks                    `toml:"marks"`
@@ -41,6 +43,10 @@ type rawCharacteristic struct {
 	Prior     any       `toml:"prior"`
 	Retests   string    `toml:"retests"`
 	Serials   any       `toml:"serials"`
+
+	CensoredAtMost *float64 `toml:"censored_at_most"`
+	Stuck          any      `toml:"stuck"`
+	Far            *float64 `toml:"far"`
 }
 
 type rawLimits struct {
@@ -66,6 +72,12 @@ type rawSource struct {
 	TimeFormat string         `toml:"time_format"`
 	TimeZone   string         `toml:"time_zone"`
 	Columns    map[string]any `toml:"columns"`
+
+	Faults   rawFaults   `toml:"faults"`
+	Variants rawVariants `toml:"variants"`
+	Ahead    string      `toml:"ahead"`
+	Behind   string      `toml:"behind"`
+	Present  string      `toml:"present"`
 }
 
 type rawMarks struct {
@@ -85,6 +97,11 @@ type rawRule struct {
 	Priority   string   `toml:"priority"`
 	Tell       []string `toml:"tell"`
 	FirstCheck string   `toml:"first_check"`
+
+	Quiet   string `toml:"quiet"`
+	Line    string `toml:"line"`
+	Source  string `toml:"source"`
+	Process string `toml:"process"`
 }
 
 type rawFeed struct {

@@ -43,6 +43,7 @@ func (c *checker) sources(raw *rawFile) {
 		s.Resent = c.resent(key+".resent", r.Resent)
 		c.form(key, &r, &s.Form)
 		c.columns(key+".columns", r.Columns, &s.Columns, raw)
+		c.rowForm(key, &r, &s, raw)
 		c.cfg.Sources = append(c.cfg.Sources, s)
 	}
 	if len(raw.Source) == 0 {
@@ -171,13 +172,8 @@ func (c *checker) measured(key, name string, v any, out *Columns, raw *rawFile) 
 		c.fault(key, claim.Nearest(name, known), "time, line, serial or a characteristic", "there is no characteristic %q", name)
 		return
 	}
-	m := Measured{Characteristic: name, OfIs: 1, Scale: 1, Lower: math.Inf(-1), Upper: math.Inf(1)}
-	if p := raw.Characteristic[name].Plausible; p.Lower != nil {
-		m.Lower = *p.Lower
-	}
-	if p := raw.Characteristic[name].Plausible; p.Upper != nil {
-		m.Upper = *p.Upper
-	}
+	m := Measured{Characteristic: name, OfIs: 1, Scale: 1}
+	m.Lower, m.Upper = plausible(raw.Characteristic[name].Plausible)
 	if table, isTable := v.(map[string]any); isTable {
 		c.measuredTable(key, table, ch, &m)
 	} else {
@@ -187,7 +183,7 @@ func (c *checker) measured(key, name string, v any, out *Columns, raw *rawFile) 
 }
 
 func (c *checker) measuredTable(key string, table map[string]any, ch *rules.Characteristic, m *Measured) {
-	known := []string{"column", "scale", "offset"}
+	known := []string{"column", "scale", "offset", "beyond"}
 	switch ch.Family {
 	case "binomial":
 		known = []string{"column", "of", "pass", "fail"}
@@ -211,6 +207,8 @@ func (c *checker) measuredTable(key string, table map[string]any, ch *rules.Char
 			} else {
 				m.OfIs = c.number(k, v)
 			}
+		case name == "beyond":
+			m.Beyond = c.boolean(k, v)
 		case name == "scale":
 			m.Scale = c.number(k, v)
 		case name == "offset":
@@ -226,6 +224,18 @@ func (c *checker) measuredTable(key string, table map[string]any, ch *rules.Char
 	if (m.Pass == nil) != (m.Fail == nil) {
 		c.fault(key, "", `both: pass = ["OK"] and fail = ["NOK"]`, "one of pass and fail is missing")
 	}
+}
+
+// plausible are the values that a row may have, infinite where none is declared.
+func plausible(l rawLimits) (lower, upper float64) {
+	lower, upper = math.Inf(-1), math.Inf(1)
+	if l.Lower != nil {
+		lower = *l.Lower
+	}
+	if l.Upper != nil {
+		upper = *l.Upper
+	}
+	return lower, upper
 }
 
 func (c *checker) number(key string, v any) float64 {

@@ -63,6 +63,8 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 		c.withdrawn(e)
 	case e.Decided != nil:
 		c.decided(e.At, e.Decided)
+	case e.Stepped != nil:
+		c.stepped(e)
 	case e.Segment != nil:
 		since := ""
 		if t := e.Segment.Since; !t.IsZero() {
@@ -110,9 +112,7 @@ func (c *Collector) batch(e *rules.Event) {
 		s.Files++
 	}
 	s.Rows += len(b.Rows.Line)
-	for _, series := range b.Series {
-		s.Measurements += len(series.Value)
-	}
+	c.rows(e, s)
 	s.HeldRows += len(b.Held)
 	for _, row := range b.Held {
 		c.held(Held{At: e.At, Record: e.Index, Source: b.Source, File: b.File, Line: row.Line, Reason: row.Reason, Text: row.Text})

@@ -69,6 +69,7 @@ type Log struct {
 	Records   [2]uint64        `json:"records"` // of the journal: from, up to but not including
 	Sources   []Source         `json:"sources"`
 	Held      []Held           `json:"held"`
+	LeftOut   []LeftOut        `json:"left_out,omitempty"` // rows, as declared
 	Changes   []Change         `json:"changes"`
 	Gaps      []Gap            `json:"not_watching"`
 	Remarks   []string         `json:"remarks"`
@@ -91,6 +92,10 @@ type Source struct {
 	HeldFiles    int    `json:"held_files"`
 	HeldRows     int    `json:"held_rows"`
 	Again        int    `json:"again"` // files whose content had been taken before
+
+	Beyond  int      `json:"beyond,omitempty"`  // readings beyond a gauge's limits
+	Parts   int      `json:"parts,omitempty"`   // readings of reference parts
+	Ignored []string `json:"ignored,omitempty"` // columns that nothing is mapped to
 }
 
 // Held is one file, or one row, that was not counted.

@@ -25,9 +25,11 @@ func (l *Log) Markdown(zone *time.Location) []byte {
 	l.alarms(&w, zone)
 	l.crossed(&w, zone)
 	l.cameIn(&w)
+	l.leftOut(&w)
 	l.held(&w, zone)
 	l.gaps(&w, zone)
 	l.processes(&w, zone)
+	l.rigs(&w, zone)
 	section(&w, "Remarks", len(l.Remarks) == 0, "None.")
 	for _, r := range l.Remarks {
 		fmt.Fprintf(&w, "- %s\n", text(r))
@@ -101,6 +103,9 @@ func (l *Log) processes(w *bytes.Buffer, zone *time.Location) {
 	fmt.Fprintln(w, "| process | units | estimate | 95 % between | unit | last measured |")
 	fmt.Fprintln(w, "|---|--:|---|---|---|---|")
 	for _, p := range l.Processes {
+		if p.IsOffset() {
+			continue // rigs
+		}
 		estimate, between := "-", p.Why
 		if p.Estimate != nil {
 			m, lo, hi := figures(p.Estimate)
@@ -116,6 +121,7 @@ func (l *Log) processes(w *bytes.Buffer, zone *time.Location) {
 		fmt.Fprintf(w, "| %s | %s | %s | %s | %s | %s |\n", cell(p.Process),
 			strconv.FormatFloat(math.Round(p.Units*10)/10, 'f', -1, 64), cell(estimate), cell(between), cell(p.Unit), last)
 	}
+	l.notes(w)
 }
 
 // figures writes an interval with the digits its width deserves.

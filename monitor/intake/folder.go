@@ -103,6 +103,9 @@ func (w *watcher) list() (infos []fs.FileInfo, anew bool, err error) {
 		return nil, false, err
 	}
 	defer root.Close()
+	if err := w.isPresent(root); err != nil {
+		return nil, false, err
+	}
 	if w.folder, err = root.Stat("."); err != nil {
 		return nil, false, err
 	}
@@ -131,6 +134,20 @@ func (w *watcher) list() (infos []fs.FileInfo, anew bool, err error) {
 			return nil, anew, err
 		}
 	}
+}
+
+// isPresent says that the folder is the one that was meant: it holds the file that is always there.
+// An empty folder under a share that is not mounted does not.
+func (w *watcher) isPresent(root *os.Root) error {
+	if w.src.Present == "" {
+		return nil
+	}
+	_, err := root.Lstat(w.src.Present)
+	if errors.Is(err, fs.ErrNotExist) {
+		return fmt.Errorf("the file %s, which is always in it, is not there (`present` of the source): "+
+			"it may be the empty folder under a share that is not mounted", w.src.Present)
+	}
+	return err
 }
 
 // begin watches the folder. Without a watch (the system has no more of them, say) the looks

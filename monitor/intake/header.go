@@ -13,6 +13,7 @@ import (
 // column is not mapped.
 type columns struct {
 	time, line, serial int
+	fault, variant     int
 	value, of          []int // by measure
 }
 
@@ -46,7 +47,7 @@ func (p *pass) header() (sentence string) {
 // wanted are the names of the mapped columns.
 func (p *pass) wanted() []string {
 	c := &p.src.Columns
-	list := []string{c.Time, c.Line, c.Serial}
+	list := []string{c.Time, c.Line, c.Serial, p.src.Faults.Column, p.src.Variants.Column}
 	for _, m := range c.Measured {
 		list = append(list, m.Column, m.Of)
 	}
@@ -79,6 +80,7 @@ func (p *pass) place() (sentence string) {
 	}
 	at, c := &p.at, &p.src.Columns
 	at.time, at.line, at.serial = find(c.Time), find(c.Line), find(c.Serial)
+	at.fault, at.variant = find(p.src.Faults.Column), find(p.src.Variants.Column)
 	for i := range p.measures {
 		at.value[i], at.of[i] = find(p.measures[i].Column), find(p.measures[i].Of)
 	}

@@ -16,6 +16,7 @@
 //
 // Where things are: read.go the Reader; text.go, records.go, numeral.go, clock.go and stamp.go
 // how encodings, records, numbers and times are read; header.go and rows.go what they mean;
+// aside.go which rows are about something else: a fault of the rig, another variant, a reference part;
 // account.go the account row by row; say.go how sentences show what was read; watch.go,
 // folder.go, look.go the watching; grow.go and follow.go files that grow; keep.go the copies of
 // what is held.
@@ -47,9 +48,11 @@ type Reading struct {
 	Remarks []string // sentences on what had to be decided: times that the clock showed twice
 	Cut     bool     // the text of a held row was too long to be kept beside its reason
 
-	headed bool  // the header was understood
-	broken bool  // what is behind the last row can't be read
-	last   int64 // the time of the last row, ns; 0 where there is none
+	aside     []asideRow    // rows left out as declared
+	asideSums []rules.Aside // and how many for which reason
+	headed    bool          // the header was understood
+	broken    bool          // what is behind the last row can't be read
+	last      int64         // the time of the last row, ns; 0 where there is none
 }
 
 // Reader reads the files of one source. It may be used by several goroutines.
@@ -63,6 +66,7 @@ type Reader struct {
 	still    clock // as it is before a file
 	unfit    string
 	desks    sync.Pool // of *desk
+	aboutRow aboutRow
 }
 
 // measure is one characteristic of the source.
@@ -71,6 +75,7 @@ type measure struct {
 	*rules.Characteristic
 	on         []bool // by index into Reader.lines: whether it is measured on that line
 	everywhere bool   // on all of them
+	group      int    // of the rows it is read from: see aboutRow
 }
 
 // NewReader makes the reader of a source under a plan. Both must come from one checked
@@ -109,6 +114,7 @@ func NewReader(src *config.Source, plan *rules.Plan) *Reader {
 				src.Columns.LineIs)
 		}
 	}
+	r.prepare()
 	return r
 }
 
@@ -131,7 +137,7 @@ func (r *Reader) read(g *Reading, file string, written time.Time, content []byte
 		sentence = p.read(content)
 	}
 	g.last = p.clock.last
-	if sentence == "" && len(p.line) == 0 {
+	if sentence == "" && len(p.line) == 0 && len(p.asideSums) == 0 {
 		sentence = p.nothing()
 	}
 	if sentence != "" {
@@ -143,11 +149,12 @@ func (r *Reader) read(g *Reading, file string, written time.Time, content []byte
 	}
 	g.Batch = &rules.Batch{
 		Source: r.src.Name, File: file, SHA256: sum, To: int64(len(content)), Written: written.UTC(),
-		Rows: p.rows(), Series: p.allSeries(), Held: p.held,
+		Rows: p.rows(), Series: p.allSeries(), Held: p.held, Aside: g.asideSums, Ignored: g.Ignored,
 	}
 	if remark := p.clock.remark(); remark != "" {
 		g.Remarks = append(g.Remarks, shown(file)+": "+remark)
 	}
+	g.Batch.Remarks = g.Remarks
 	return g
 }
 
@@ -163,6 +170,7 @@ type pass struct {
 	held     []rules.HeldRow
 	heldText int
 	before   int    // lines of the file that were read before, with the header
+	about           // of the current row
 	first    string // why the first row is held, without the file's name
 }
 

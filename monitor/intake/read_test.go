@@ -87,6 +87,8 @@ func account(g *Reading) string {
 		switch {
 		case row.Held != "":
 			fmt.Fprintf(&b, "%d held: %s | %q\n", row.Line, row.Held, row.Text)
+		case row.Aside != "":
+			fmt.Fprintf(&b, "%d left out: %s\n", row.Line, row.Aside)
 		case row.Values == nil:
 			fmt.Fprintf(&b, "%d no value\n", row.Line)
 		default:
@@ -96,7 +98,11 @@ func account(g *Reading) string {
 			}
 			fmt.Fprintf(&b, "%d %s %s %q", row.Line, at, row.On, row.Serial)
 			for _, v := range row.Values {
-				fmt.Fprintf(&b, " %s=%v", v.Characteristic, v.Value)
+				name, sign := v.Characteristic, map[int]string{1: ">", -1: "<"}[v.Side]
+				if v.Part {
+					name = "offset of " + v.Process
+				}
+				fmt.Fprintf(&b, " %s=%s%v", name, sign, v.Value)
 				if v.Of != 1 {
 					fmt.Fprintf(&b, "/%v", v.Of)
 				}

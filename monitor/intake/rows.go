@@ -27,18 +27,21 @@ type desk struct {
 	serials []byte
 	ends    []int    // of each serial in serials
 	series  []column // by measure, and within it by line
+	offsets []column // of the rig: by index into aboutRow.offsets
 }
 
 // cell is one measurement of the current row.
 type cell struct {
 	text      []byte // nil where it stands for "no value"
 	value, of float64
+	side      int // 1 where the reading lies above value, beyond the gauge's limit; -1 below; else 0
 }
 
 // column collects the measurements of one process.
 type column struct {
 	row       []int
 	value, of []float64 // of is empty where it is 1 throughout
+	beyond    []rules.Bound
 }
 
 func newDesk(r *Reader) *desk {
@@ -48,6 +51,7 @@ func newDesk(r *Reader) *desk {
 		at:      columns{value: make([]int, len(r.measures)), of: make([]int, len(r.measures))},
 		now:     make([]cell, len(r.measures)),
 		series:  make([]column, len(r.measures)*len(r.lines)),
+		offsets: make([]column, len(r.aboutRow.offsets)),
 	}
 }
 
@@ -57,9 +61,16 @@ func (p *pass) begin() {
 	d.clock = p.still
 	d.line, d.time, d.serials, d.ends = d.line[:0], d.time[:0], d.serials[:0], d.ends[:0]
 	for i := range d.series {
-		s := &d.series[i]
-		s.row, s.value, s.of = s.row[:0], s.value[:0], s.of[:0]
+		d.series[i].clear()
 	}
+	for i := range d.offsets {
+		d.offsets[i].clear()
+	}
+	p.arrives()
+}
+
+func (s *column) clear() {
+	s.row, s.value, s.of, s.beyond = s.row[:0], s.value[:0], s.of[:0], s.beyond[:0]
 }
 
 // leave gives the desk back, without the content that was read.
@@ -80,21 +91,24 @@ func (p *pass) row() {
 	if p.doubtful && !p.isText() {
 		return
 	}
+	if !p.weighed() {
+		return
+	}
 	if !p.cells() {
 		if !p.isBlank() {
 			p.NoValue = append(p.NoValue, p.recs.line)
 		}
 		return
 	}
-	on, ok := p.onLine()
-	if !ok {
-		return
+	on, ok := 0, true
+	if len(p.parts) == 0 {
+		if on, ok = p.onLine(); !ok {
+			return
+		}
 	}
 	var ns int64
 	if p.at.time >= 0 {
-		var sentence string
-		if ns, sentence = p.clock.read(trim(p.recs.field(p.at.time)), p.recs.line); sentence != "" {
-			p.hold(p.at.time+1, "%s", sentence)
+		if ns, ok = p.time(); !ok {
 			return
 		}
 	}
@@ -105,11 +119,28 @@ func (p *pass) row() {
 		}
 	}
 	for i := range p.now {
-		if p.now[i].text != nil && !p.measurement(i, on) {
+		if p.now[i].text != nil && !p.measurement(i) {
 			return
 		}
 	}
+	if len(p.parts) > 0 {
+		p.countParts(ns, serial)
+		return
+	}
 	p.count(on, ns, serial)
+}
+
+// time is when the row was measured.
+func (p *pass) time() (ns int64, ok bool) {
+	text := trim(p.recs.field(p.at.time))
+	ns, sentence := p.clock.read(text, p.recs.line)
+	if sentence == "" {
+		sentence = p.untimely(ns, text)
+	}
+	if sentence != "" {
+		p.hold(p.at.time+1, "%s", sentence)
+	}
+	return ns, sentence == ""
 }
 
 // isBlank says whether the current record is nothing but blanks and delimiters.
@@ -141,6 +172,10 @@ func (p *pass) isText() bool {
 // cells finds the cells of the row that hold a value; it is false where none does.
 func (p *pass) cells() (any bool) {
 	for i := range p.now {
+		if p.measures[i].group != p.group || !p.asksPart(i) {
+			p.now[i].text = nil
+			continue
+		}
 		text := trim(p.recs.field(p.at.value[i]))
 		if p.standsForNone(text) {
 			p.now[i].text = nil
@@ -215,9 +250,13 @@ func (p *pass) serial() (serial []byte, ok bool) {
 }
 
 // measurement reads one value of the row, or holds the row.
-func (p *pass) measurement(i, on int) bool {
+func (p *pass) measurement(i int) bool {
 	m, c := &p.measures[i], &p.now[i]
-	c.of = m.OfIs
+	c.of, c.side = m.OfIs, 0
+	text := c.text
+	if m.Beyond {
+		text, c.side = beyond(c.text)
+	}
 	var sentence string
 	if at := p.at.of[i]; at >= 0 {
 		if c.of, sentence = p.numbers.read(trim(p.recs.field(at))); sentence != "" {
@@ -236,7 +275,7 @@ func (p *pass) measurement(i, on int) bool {
 				quote(c.text), quotes(m.Pass), quotes(m.Fail))
 			return false
 		}
-	} else if c.value, sentence = p.numbers.read(c.text); sentence != "" {
+	} else if c.value, sentence = p.numbers.read(text); sentence != "" {
 		p.hold(p.at.value[i]+1, "%s", sentence)
 		return false
 	}
@@ -244,6 +283,9 @@ func (p *pass) measurement(i, on int) bool {
 		// The conversion keeps a machine that can from doing both in one step: it would round
 		// otherwise.
 		c.value = float64(c.value*m.Scale) + m.Offset
+		if m.Scale < 0 {
+			c.side = -c.side
+		}
 	}
 	if sentence = p.unfitValue(m, c); sentence != "" {
 		p.hold(p.at.value[i]+1, "%s", sentence)
@@ -266,8 +308,23 @@ func (p *pass) unfitValue(m *measure, c *cell) string {
 
 // count adds the row's measurements to what counts.
 func (p *pass) count(on int, ns int64, serial []byte) {
+	row := p.countRow(ns, serial)
+	for i := range p.now {
+		if c := &p.now[i]; c.text != nil {
+			s := &p.desk.series[i*len(p.lines)+on]
+			if c.side != 0 {
+				s.beyond = append(s.beyond, rules.Bound{Row: row, Limit: c.value, Above: c.side > 0})
+				continue
+			}
+			s.add(row, c.value, c.of)
+		}
+	}
+}
+
+// countRow notes where a row that counts stands and what it is about; it returns its index.
+func (p *pass) countRow(ns int64, serial []byte) (row int) {
 	d := p.desk
-	row := len(d.line)
+	row = len(d.line)
 	d.line = append(d.line, p.recs.line)
 	if p.at.time >= 0 {
 		d.time = append(d.time, ns)
@@ -276,12 +333,7 @@ func (p *pass) count(on int, ns int64, serial []byte) {
 		d.serials = append(d.serials, serial...)
 		d.ends = append(d.ends, len(d.serials))
 	}
-	for i := range p.now {
-		if c := &p.now[i]; c.text != nil {
-			s := &d.series[i*len(p.lines)+on]
-			s.add(row, c.value, c.of)
-		}
-	}
+	return row
 }
 
 // add adds a measurement to a column.
@@ -353,17 +405,27 @@ func (p *pass) allSeries() []rules.Series {
 		m := &p.measures[i]
 		for _, line := range m.Lines {
 			s := &p.desk.series[i*len(p.lines)+p.lineOf[line]]
-			if len(s.row) == 0 {
-				continue
+			if len(s.row)+len(s.beyond) > 0 {
+				list = append(list, s.take(rules.ProcessName(m.Characteristic.Name, line)))
 			}
-			series := rules.Series{
-				Process: rules.ProcessName(m.Characteristic.Name, line), Row: handOver(&s.row), Value: handOver(&s.value),
-			}
-			if len(s.of) > 0 {
-				series.Of = handOver(&s.of)
-			}
-			list = append(list, series)
 		}
 	}
-	return list
+	for i, name := range p.aboutRow.offsets {
+		if s := &p.desk.offsets[i]; len(s.row) > 0 {
+			list = append(list, s.take(name))
+		}
+	}
+	return joined(list)
+}
+
+// take takes the column off the desk.
+func (s *column) take(process string) rules.Series {
+	series := rules.Series{Process: process, Row: handOver(&s.row), Value: handOver(&s.value)}
+	if len(s.of) > 0 {
+		series.Of = handOver(&s.of)
+	}
+	if len(s.beyond) > 0 {
+		series.Beyond = slices.Clone(s.beyond)
+	}
+	return series
 }

@@ -110,8 +110,10 @@ type sentFile struct {
 }
 
 func newWatcher(src *config.Source, plan *rules.Plan, known Known, out chan<- Arrival) *watcher {
+	reader := NewReader(src, plan)
+	reader.Arriving(time.Now)
 	return &watcher{
-		src: src, reader: NewReader(src, plan), known: known, out: out,
+		src: src, reader: reader, known: known, out: out,
 		patience: patience, soonest: soonest, begun: time.Now(),
 		waiting: map[string]*candidate{}, sent: map[string]sentFile{}, passed: map[string]sentFile{},
 	}
@@ -247,7 +249,7 @@ func (w *watcher) unwatch() {
 // wanted says whether a name is one of the source's files. Hidden names and those that end in
 // .part or .tmp are of files still being written.
 func (w *watcher) wanted(name string) bool {
-	if strings.HasPrefix(name, ".") || strings.HasSuffix(name, ".part") || strings.HasSuffix(name, ".tmp") {
+	if name == w.src.Present || strings.HasPrefix(name, ".") || strings.HasSuffix(name, ".part") || strings.HasSuffix(name, ".tmp") {
 		return false
 	}
 	ok, err := path.Match(w.src.Files, name)

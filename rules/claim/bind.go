@@ -41,6 +41,9 @@ func (c *Claim) Bind(known func(process string) (Known, bool), names []string) (
 			return nil, &Error{Column: c.place(i), Read: fmt.Sprintf("%s of %s, whose family is %s", c.Kind, name, k.Family),
 				Expected: "a quantity of that family: " + kindsOf(k.Family)}
 		}
+		if k.Offset != (c.Kind == Bias) {
+			return nil, &Error{Column: c.place(i), Read: fmt.Sprintf("%s of %s", c.Kind, name), Expected: offsetKind(k.Offset)}
+		}
 		none := math.IsInf(k.Lower, -1) && math.IsInf(k.Upper, 1)
 		if none && (c.Limits || c.Kind == Outside || c.Kind == Capability) {
 			return nil, &Error{Column: c.place(i), Read: fmt.Sprintf("%s, whose characteristic has no limits", name),
@@ -51,6 +54,14 @@ func (c *Claim) Bind(known func(process string) (Known, bool), names []string) (
 		}
 	}
 	return &bound, nil
+}
+
+// offsetKind says what a claim may say of a rig's offset, or of any other process.
+func offsetKind(offset bool) string {
+	if offset {
+		return "bias: a rig has an offset and nothing else"
+	}
+	return "the name of a rig that measures reference parts"
 }
 
 // place is the column of the first mention of a process.

@@ -74,4 +74,5 @@ type Known struct {
 	Family posterior.Family
 	Lower  float64 // the characteristic's limits; -Inf and +Inf where there is none
 	Upper  float64
+	Offset bool // what a rig adds to what it measures: bias speaks of it, and nothing else does
 }

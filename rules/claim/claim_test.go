@@ -161,9 +161,9 @@ func TestBind(t *testing.T) {
 	known := func(name string) (Known, bool) {
 		switch name {
 		case "head.L1", "head.L2":
-			return Known{posterior.NormalFamily, 31, math.Inf(1)}, true
+			return Known{Family: posterior.NormalFamily, Lower: 31, Upper: math.Inf(1)}, true
 		case "leak.L1":
-			return Known{posterior.LognormalFamily, math.Inf(-1), math.Inf(1)}, true
+			return Known{Family: posterior.LognormalFamily, Lower: math.Inf(-1), Upper: math.Inf(1)}, true
 		}
 		return Known{}, false
 	}

@@ -101,6 +101,9 @@ func (m *Memory) Clone() *Memory {
 	return &c
 }
 
+// Remembers says which measurements count.
+func (m *Memory) Remembers() Remember { return m.remember }
+
 // beforeTime is before every step of a window of time.
 const beforeTime = math.MinInt64 / 2
 
