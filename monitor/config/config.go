@@ -73,6 +73,8 @@ type Source struct {
 
 // Form is how the text of a file is to be taken.
 type Form struct {
+	Rows       string   // "csv", or "json lines": one object a line, its members named as columns
+	Compressed string   // "", or "gzip"
 	Delimiter  byte     // ',', ';' or '\t'
 	Decimal    byte     // '.' or ','
 	Grouping   byte     // 0, or the character between groups of three digits: ' ', '.', ',', '\''

@@ -62,6 +62,8 @@ type rawSource struct {
 	Scan       string         `toml:"scan"`
 	Largest    string         `toml:"largest"`
 	Resent     string         `toml:"resent"`
+	Rows       string         `toml:"rows"`
+	Compressed string         `toml:"compressed"`
 	Delimiter  string         `toml:"delimiter"`
 	Decimal    string         `toml:"decimal"`
 	Grouping   string         `toml:"grouping"`

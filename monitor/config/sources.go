@@ -42,12 +42,34 @@ func (c *checker) sources(raw *rawFile) {
 		s.Largest = c.size(key+".largest", r.Largest, 64e6)
 		s.Resent = c.resent(key+".resent", r.Resent)
 		c.form(key, &r, &s.Form)
+		c.kindOfRows(key, &r, &s)
 		c.columns(key+".columns", r.Columns, &s.Columns, raw)
 		c.rowForm(key, &r, &s, raw)
 		c.cfg.Sources = append(c.cfg.Sources, s)
 	}
 	if len(raw.Source) == 0 {
 		c.fault("source", "", "a table such as [source.rig1]", "no source is configured")
+	}
+}
+
+// kindOfRows reads how rows stand in a file, and whether it is compressed.
+func (c *checker) kindOfRows(key string, r *rawSource, s *Source) {
+	f := &s.Form
+	kinds := []string{"csv", "json lines"}
+	if f.Rows = cmp.Or(r.Rows, "csv"); !slices.Contains(kinds, f.Rows) {
+		c.fault(key+".rows", claim.Nearest(f.Rows, kinds), `"csv" or "json lines"`, "read %q", r.Rows)
+	}
+	if f.Compressed = r.Compressed; f.Compressed != "" && f.Compressed != "gzip" {
+		c.fault(key+".compressed", claim.Nearest(f.Compressed, []string{"gzip"}), `"gzip"`, "read %q", r.Compressed)
+	}
+	if s.Arrives == "growing" && (f.Rows != "csv" || f.Compressed != "") {
+		c.fault(key+".arrives", "", `"whole"`, "only CSV that is not compressed is read while it grows")
+	}
+	if f.Rows != "json lines" {
+		return
+	}
+	if f.Decimal != '.' || f.Grouping != 0 || f.Preamble != 0 || f.UnitsRow || r.Delimiter != "" {
+		c.fault(key+".rows", "", "json lines without delimiter, decimal, grouping, preamble and units_row", "keys that are for CSV stand beside it")
 	}
 }
 

@@ -15,7 +15,8 @@
 // held whole, with its rows.
 //
 // Where things are: read.go the Reader; text.go, records.go, numeral.go, clock.go and stamp.go
-// how encodings, records, numbers and times are read; header.go and rows.go what they mean;
+// how encodings, records, numbers and times are read; gzip.go and
+// jsonlines.go two other forms; header.go and rows.go what they mean;
 // aside.go which rows are about something else: a fault of the rig, another variant, a reference part;
 // account.go the account row by row; say.go how sentences show what was read; watch.go,
 // folder.go, look.go the watching; grow.go and follow.go files that grow; keep.go the copies of
@@ -186,6 +187,11 @@ func (p *pass) read(content []byte) (sentence string) {
 	if len(content) == 0 {
 		return "the file is empty; expected a header and rows"
 	}
+	if p.src.Form.Compressed == "gzip" {
+		if content, sentence = unpacked(content, p.src.Largest); sentence != "" {
+			return sentence
+		}
+	}
 	text, sentence := decode(&p.src.Form, content)
 	if sentence != "" {
 		return sentence
@@ -197,6 +203,9 @@ func (p *pass) read(content []byte) (sentence string) {
 		return p.zero(text, i)
 	}
 	p.doubtful = !utf8.Valid(text)
+	if p.src.Form.Rows == "json lines" {
+		return p.objects(text)
+	}
 	p.recs.reset(text, p.src.Form.Delimiter)
 	for i := range p.src.Form.Preamble {
 		if !p.recs.skip() {
