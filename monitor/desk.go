@@ -109,8 +109,9 @@ func (d *Desk) Close() error { return d.store.Close() }
 
 // happening is an event on its way to the journal, with what intake must remember of it.
 type happening struct {
-	event rules.Event
-	files []store.FileMemory
+	event  rules.Event
+	files  []store.FileMemory
+	sealed *store.Volume // whose records leave the store's file with it
 }
 
 // commit applies events and writes what followed in one transaction. An event that the
@@ -143,6 +144,9 @@ func (d *Desk) commit(list []happening) (outcomes []rules.Outcomes, refused []er
 		for _, f := range list[i].files {
 			f.Index = e.Index
 			step.Files = append(step.Files, f)
+		}
+		if list[i].sealed != nil {
+			step.Sealed = list[i].sealed
 		}
 		if step.Outbox, err = d.tell(step.Outbox, &before, e, &outcomes[i]); err != nil {
 			return nil, nil, err

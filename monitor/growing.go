@@ -47,7 +47,7 @@ func (d *Desk) stretch(a *intake.Arrival, old store.FileMemory, memory store.Fil
 		return d.hold(a, heldOf(a, reason), memory)
 	}
 	memory.Counted = true
-	return happening{rules.Event{Batch: a.Reading.Batch}, []store.FileMemory{memory}}, nil
+	return happening{event: rules.Event{Batch: a.Reading.Batch}, files: []store.FileMemory{memory}}, nil
 }
 
 // growing says whether a source's files grow.

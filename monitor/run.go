@@ -108,7 +108,12 @@ func (d *Desk) begin() error {
 	if err := d.Adopt(); err != nil {
 		return err
 	}
-	return d.WriteMissedDayLogs()
+	if err := d.WriteMissedDayLogs(); errors.Is(err, store.ErrVolume) {
+		d.log.Error().Err(err).Msg("the day logs that were not written at their day's end can't be written now")
+	} else if err != nil {
+		return err
+	}
+	return nil
 }
 
 // end notes an end in order, and tells the feeds what is left once more.
@@ -333,7 +338,7 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 	case found && !withdrawn:
 		e := rules.Event{Again: &rules.Again{Source: a.Source, File: a.File, SHA256: hex.EncodeToString(a.Reading.SHA256[:]), First: index, Name: name}}
 		memory.Counted = true
-		return happening{e, []store.FileMemory{memory}}, nil
+		return happening{event: e, files: []store.FileMemory{memory}}, nil
 	}
 	if old.Counted {
 		reason, err := d.resent(a)
@@ -352,7 +357,7 @@ func (d *Desk) happening(a *intake.Arrival, fresh map[[32]byte]string) (happenin
 	}
 	memory.Counted, memory.Batch = true, true
 	fresh[a.Reading.SHA256] = a.Source + " " + a.File
-	return happening{rules.Event{Batch: a.Reading.Batch}, []store.FileMemory{memory}}, nil
+	return happening{event: rules.Event{Batch: a.Reading.Batch}, files: []store.FileMemory{memory}}, nil
 }
 
 // hold keeps a copy of what is held and makes the event of it.
@@ -364,7 +369,7 @@ func (d *Desk) hold(a *intake.Arrival, held *rules.Held, memory store.FileMemory
 		}
 		held.Kept = name
 	}
-	return happening{rules.Event{Held: held}, []store.FileMemory{memory}}, nil
+	return happening{event: rules.Event{Held: held}, files: []store.FileMemory{memory}}, nil
 }
 
 // heldFolder is where copies of what is held are kept.
@@ -450,6 +455,9 @@ func (d *Desk) keepTime(ctx context.Context) {
 			d.log.Error().Err(err).Msg("write the day log")
 		} else {
 			d.log.Info().Str("file", markdown).Msg("the day log is written")
+		}
+		if err := d.Seal(day.From, fewestInVolume); err != nil {
+			d.log.Error().Err(err).Msg("move older records into a volume; they stay where they are")
 		}
 		day = daylog.DayOf(now, site.Zone, site.DayStarts)
 	}

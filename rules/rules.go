@@ -79,6 +79,7 @@ type Event struct {
 	Segment      *Segment      `json:"segment,omitempty"`
 	Acknowledged *Acknowledged `json:"acknowledged,omitempty"`
 	Watching     *Watching     `json:"watching,omitempty"`
+	Sealed       *Sealed       `json:"sealed,omitempty"`
 	Withdrawn    *Withdrawn    `json:"withdrawn,omitempty"`
 	Decided      *Decided      `json:"decided,omitempty"`
 	Moment       *Moment       `json:"moment,omitempty"`
@@ -221,6 +222,14 @@ type Decided struct {
 	Reason string `json:"reason"`
 	By     string `json:"by"`
 	How    string `json:"how"` // how By was established
+}
+
+// Sealed says that older records were moved into a volume, a file beside the store, and which bytes it has.
+type Sealed struct {
+	From   uint64 `json:"from"` // first record
+	To     uint64 `json:"to"`   // the record after the last
+	File   string `json:"file"`
+	SHA256 string `json:"sha256"` // hexadecimal
 }
 
 // AlarmState is the state a rule is in, in the words of ISA-18.2 / IEC 62682.

@@ -250,7 +250,7 @@ func (s *State) Apply(e *Event) (Outcomes, error) {
 		return Outcomes{}, s.decide(e, e.Decided)
 	case e.Moment != nil:
 		return s.applyMoment(e)
-	case e.Stepped != nil, e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil:
+	case e.Stepped != nil, e.Started != nil, e.Stopped != nil, e.Held != nil, e.Again != nil, e.Watching != nil, e.Sealed != nil:
 		return Outcomes{}, nil
 	}
 	return Outcomes{}, fmt.Errorf("event %d says nothing that the engine knows", e.Index)

@@ -60,6 +60,9 @@ func (s *Store) readWhatIs() error {
 	if err == nil {
 		_, err = s.readMeta()
 	}
+	if err == nil {
+		err = s.readVolumes()
+	}
 	if err != nil {
 		return err
 	}
@@ -109,6 +112,9 @@ func (s *Store) Backup(folder string) (err error) {
 	}
 	path := filepath.Join(folder, fileName)
 	if err := s.guard("copy", func() error { return copyTo(s.db, path) }); err != nil {
+		return err
+	}
+	if err := s.copyVolumes(folder); err != nil {
 		return err
 	}
 	if err := checkCopy(path); err != nil {

@@ -114,14 +114,14 @@ func (s *Store) beginOrigin(before []Origin, anew *NewOrigin) error {
 				meta.Put(originKey, []byte(next.ID)),
 				meta.Put(signedKey, number(0)),
 				tx.Bucket(originsBucket).Put(number(uint64(len(before))), text),
-				plant(tx),
+				s.plant(tx),
 			)
 		})
 	})
 }
 
 // plant makes the tree of the records as they are: a new origin promises what is there.
-func plant(tx *bolt.Tx) error {
+func (s *Store) plant(tx *bolt.Tx) error {
 	if err := tx.DeleteBucket(treeBucket); err != nil {
 		return err
 	}
@@ -130,6 +130,18 @@ func plant(tx *bolt.Tx) error {
 		return err
 	}
 	var count ledger.Recount
+	for count.Size() < s.sealedTo() {
+		v, _ := s.volumeOf(count.Size())
+		records, err := s.inVolume(v, count.Size())
+		if err != nil {
+			return err
+		}
+		for _, record := range records {
+			if err := tree.Put(number(count.Size()), count.Add(record)); err != nil {
+				return err
+			}
+		}
+	}
 	return tx.Bucket(journalBucket).ForEach(func(index, record []byte) error {
 		if binary.BigEndian.Uint64(index) != count.Size() {
 			return fmt.Errorf("record %d is missing", count.Size())

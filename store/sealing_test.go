@@ -257,7 +257,7 @@ func writeAnew(tx *bolt.Tx, rewrite func([][]byte) [][]byte) error {
 			return err
 		}
 	}
-	return plant(tx)
+	return new(Store).plant(tx)
 }
 
 // An older copy is refused, and so is a store without its key or last checkpoint, or with

@@ -22,6 +22,8 @@
 //	held     index                    → how many of its rows wait for a decision (uvarint); 0
 //	                                    where it is a file held whole (held.go)
 //	outbox   feed 0 number            → Message as JSON
+//	volumes  first record             → Volume as JSON: its records are in a file (volume.go), and no
+//	                                    longer in the bucket journal
 //
 // Beside the store lie the stamp (stamp.go) and, named by the origin, the key that checkpoints
 // are signed with and the last of them (sealing.go).
@@ -93,6 +95,7 @@ type Store struct {
 	before    stamp // as it was found
 	recovered string
 	sealing   sealing
+	volumes   volumes
 	bare      bool // without the tree: only a benchmark does so
 	toRead    bool // nothing is to be written
 
@@ -159,6 +162,9 @@ func (s *Store) open(o Options) (err error) {
 	}
 	if found != format {
 		return fmt.Errorf("the store in %s has format %q and this program reads %q; use the program that wrote it", s.folder, found, format)
+	}
+	if err = s.readVolumes(); err != nil {
+		return err
 	}
 	if err = s.openSealing(o.NewOrigin); err != nil {
 		return err
@@ -314,6 +320,7 @@ type Step struct {
 	Pieces  map[string][]byte // of the state that changed; nil takes one away
 	Files   []FileMemory
 	Outbox  []Message
+	Sealed  *Volume // WriteVolume has written it: its records leave the bbolt file
 }
 
 // Commit writes a step in one transaction and returns once it is on the disk.
@@ -323,6 +330,12 @@ func (s *Store) Commit(step Step) error {
 		if got := step.Entries[i].Event.Index; got != next+uint64(i) {
 			return fmt.Errorf("the record %d can't be written: the journal goes on with %d", got, next+uint64(i))
 		}
+	}
+	if step.Sealed != nil {
+		// Before its records leave the bbolt file, so that a reader finds them here or there.
+		s.volumes.mu.Lock()
+		s.volumes.list = append(s.volumes.list, *step.Sealed)
+		s.volumes.mu.Unlock()
 	}
 	err := s.guard("commit", func() error {
 		return s.db.Update(func(tx *bolt.Tx) error { return s.write(tx, &step) })
@@ -344,6 +357,11 @@ func (s *Store) write(tx *bolt.Tx, step *Step) error {
 	}
 	if err := s.noteSigned(tx); err != nil {
 		return err
+	}
+	if step.Sealed != nil {
+		if err := s.seal(tx, step.Sealed); err != nil {
+			return err
+		}
 	}
 	for name, piece := range step.Pieces {
 		if err := putPiece(tx, []byte(name), piece); err != nil {
@@ -439,11 +457,7 @@ func (s *Store) Journal(from, to uint64, visit func(rules.Event, rules.Outcomes)
 // a storage error.
 func (s *Store) Records(from, to uint64, visit func(index uint64, record []byte) error) error {
 	for to = min(to, s.Next()); from < to; {
-		var some [][]byte
-		err := s.view("read the journal", func(tx *bolt.Tx) (err error) {
-			some, err = readRecords(tx, from, to)
-			return err
-		})
+		some, err := s.some(from, to)
 		if err != nil {
 			return err
 		}
@@ -455,6 +469,24 @@ func (s *Store) Records(from, to uint64, visit func(index uint64, record []byte)
 		}
 	}
 	return nil
+}
+
+// some gives the first records of a range, one at least, from a volume or the bbolt file.
+func (s *Store) some(from, to uint64) (some [][]byte, err error) {
+	if v, ok := s.volumeOf(from); ok {
+		some, err = s.inVolume(v, from)
+		return some[:min(uint64(len(some)), to-from)], err
+	}
+	err = s.view("read the journal", func(tx *bolt.Tx) (err error) {
+		if _, moved := s.volumeOf(from); !moved {
+			some, err = readRecords(tx, from, to)
+		}
+		return err
+	})
+	if err == nil && some == nil {
+		return s.some(from, to) // it was moved meanwhile
+	}
+	return some, err
 }
 
 // readRecords copies the first records of a range, one at least.

@@ -79,6 +79,9 @@ func (s *Store) Verify(v Verification) (ledger.Checkpoint, error) {
 		return nil
 	}
 	if err = compare(); err == nil {
+		err = s.checkVolumes()
+	}
+	if err == nil {
 		err = s.recount(&count, size, compare, v.Visit)
 	}
 	found.Size, found.Root = count.Size(), count.Root()
@@ -152,11 +155,15 @@ func inOrigin(c ledger.Checkpoint, origins []Origin) error {
 func (s *Store) recount(count *ledger.Recount, size uint64, compare func() error, visit func(uint64, []byte) error) error {
 	for count.Size() < size {
 		from := count.Size()
-		var records, hashes [][]byte
-		if err := s.view("verify", func(tx *bolt.Tx) (err error) {
-			if records, err = readRecords(tx, from, size); err != nil {
-				return err
+		records, err := s.some(from, size)
+		if err != nil {
+			if errors.Is(err, ErrVolume) {
+				err = fmt.Errorf("%w: %w", ErrNotAsSigned, err)
 			}
+			return err
+		}
+		var hashes [][]byte
+		if err := s.view("verify", func(tx *bolt.Tx) (err error) {
 			for i := range records {
 				hashes = append(hashes, bytes.Clone(tx.Bucket(treeBucket).Get(number(from+uint64(i)))))
 			}
