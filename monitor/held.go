@@ -292,7 +292,7 @@ func takeRows(src *config.Source, plan *rules.Plan, file string, content []byte,
 // only leaves the rows of the given lines in a batch.
 func only(b *rules.Batch, lines []int) {
 	old := b.Rows
-	b.Rows, b.Held = rules.Rows{}, nil
+	b.Rows, b.Held, b.Aside, b.Remarks, b.Ignored = rules.Rows{}, nil, nil, nil, nil
 	place := map[int]int{} // of a row, before and now
 	for i, line := range old.Line {
 		if !slices.Contains(lines, line) {
@@ -320,7 +320,12 @@ func only(b *rules.Batch, lines []int) {
 				some.Of = append(some.Of, s.Of[k])
 			}
 		}
-		if len(some.Row) > 0 {
+		for _, r := range s.Beyond {
+			if now, ok := place[r.Row]; ok {
+				some.Beyond = append(some.Beyond, rules.Bound{Row: now, Limit: r.Limit, Above: r.Above})
+			}
+		}
+		if len(some.Row)+len(some.Beyond) > 0 {
 			left = append(left, some)
 		}
 	}

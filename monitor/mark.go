@@ -103,6 +103,14 @@ func processesOf(cfg *config.Config, m *Mark) ([]string, error) {
 			}
 		}
 	}
+	for _, o := range cfg.Plan.Offsets { // a rig that is calibrated has another offset, too
+		if m.Source == o.Source || m.Process == o.Name {
+			chosen = append(chosen, o.Name)
+		}
+		if m.Process != "" {
+			known = append(known, o.Name)
+		}
+	}
 	switch {
 	case m.Characteristic != "":
 		what, name = "characteristic", m.Characteristic

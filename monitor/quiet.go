@@ -19,28 +19,34 @@ const leastStep = time.Second
 // meantime are still being counted.
 const longestBacklog = 10 * time.Minute
 
+// instant is one moment by two clocks.
+type instant struct {
+	wall   time.Time // without the monotonic clock
+	passed time.Time // differences of these are of the monotonic clock
+}
+
+func (d *Desk) instant() instant { return instant{d.now().Round(0), time.Now()} }
+
 // minutes watches the clock: it raises quiet rules whose time is reached, and notes when the clock on
 // the wall does not go on as time does. Both become events, so that a replay needs no clock.
-func (d *Desk) minutes(ctx context.Context) {
+func (d *Desk) minutes(ctx context.Context, last instant) {
 	tick := time.NewTicker(minuteEvery)
 	defer tick.Stop()
-	begun := time.Now()
-	wall, passed := d.now(), time.Now()
-	settled := false
+	begun, settled := last.passed, false
 	for {
 		select {
 		case <-ctx.Done():
 			return
 		case <-tick.C:
 		}
-		nowWall, now := d.now(), time.Now()
-		expected := wall.Round(0).Add(now.Sub(passed)) // Sub is of the monotonic clock, Round leaves it out
-		if off := nowWall.Round(0).Sub(expected); off > leastStep || off < -leastStep {
-			d.noteError(d.stepped(rules.Stepped{Was: expected.UTC(), Is: nowWall.UTC()}), "note that the clock stepped")
+		now := d.instant()
+		expected := last.wall.Add(now.passed.Sub(last.passed))
+		if off := now.wall.Sub(expected); off > leastStep || off < -leastStep {
+			d.noteError(d.stepped(rules.Stepped{Was: expected.UTC(), Is: now.wall.UTC()}), "note that the clock stepped")
 		}
-		wall, passed = nowWall, now
+		last = now
 		if settled = settled || d.caughtUp(begun); settled {
-			d.noteError(d.quiet(nowWall), "raise a quiet rule")
+			d.noteError(d.quiet(now.wall), "raise a quiet rule")
 		}
 	}
 }

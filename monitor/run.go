@@ -36,6 +36,7 @@ const aliveEvery = 5 * time.Second
 func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	ctx, stop := context.WithCancel(ctx)
 	defer stop()
+	began := d.instant()
 	if err := d.begin(); err != nil {
 		return err
 	}
@@ -59,7 +60,7 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 	var helpers sync.WaitGroup
 	helpers.Go(func() { _ = server.Serve(control) }) // ends with ErrServerClosed
 	helpers.Go(func() { d.keepTime(ctx) })
-	helpers.Go(func() { d.minutes(ctx) })
+	helpers.Go(func() { d.minutes(ctx, began) })
 	for i := range d.cfg.Feeds {
 		helpers.Go(func() { d.deliver(ctx, i) })
 	}

@@ -32,6 +32,7 @@ type raise struct {
 // would have been had some batches never been counted.
 func (d *Desk) raisesWithout(out map[uint64]bool, to uint64) (were, would []raise, err error) {
 	state := rules.NewState()
+	state.Trust()
 	state.Consult(&history{store: d.store, out: out})
 	err = d.store.Journal(0, to, func(e rules.Event, outcomes rules.Outcomes) error {
 		var without rules.Outcomes
@@ -44,7 +45,7 @@ func (d *Desk) raisesWithout(out map[uint64]bool, to uint64) (were, would []rais
 		plan := state.Plan()
 		add := func(list []raise, o *rules.Outcomes) []raise {
 			for _, c := range o.Changes {
-				if c.Cause == rules.Raised {
+				if c.Cause == rules.Raised && c.Look != nil { // not one of a quiet rule: what arrived, arrived
 					list = append(list, raise{c.Alarm, c.Rule, plan.Says(c.Rule), e.Index, e.At})
 				}
 			}
@@ -69,7 +70,7 @@ func lacking(e *rules.Event, out map[uint64]bool) bool {
 		return list
 	}
 	switch {
-	case e.Acknowledged != nil:
+	case e.Acknowledged != nil, e.Moment != nil:
 		return false
 	case e.Withdrawn != nil:
 		w := *e.Withdrawn

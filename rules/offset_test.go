@@ -38,6 +38,15 @@ func TestOffsetOfARig(t *testing.T) {
 			t.Errorf("told %q, want %q", told, want)
 		}
 	}
+	for claim, want := range map[string]string{
+		"|bias(rig1)| > 0.2":              "delivery head: the rig's offset of rig1 is more than 0.2 kPa away from 0",
+		"|bias(rig1)| < 0.2":              "delivery head: the rig's offset of rig1 is within 0.2 kPa of 0",
+		"|bias(rig1) - bias(rig2)| < 0.2": "delivery head: the rig's offsets of rig1 and rig2 agree within 0.2 kPa",
+	} {
+		if plan.Rules[0].Claim = claim; plan.Says("rig1 high") != want {
+			t.Errorf("%s: %q, want %q", claim, plan.Says("rig1 high"), want)
+		}
+	}
 	st := standingOf(d.s, "rig1")
 	if st.Quantity != "bias" || st.Units != 4 || st.Unit != "kPa" || st.Line != "rig1" || st.Estimate == nil || st.Estimate.Median < 0.554 || st.Estimate.Median > 0.556 {
 		t.Errorf("%+v", st)

@@ -30,7 +30,8 @@ type State struct {
 	every     int64               // batches of a process between two recalls of it
 	touched   map[string]bool     // pieces changed since Pieces was last called
 
-	scratch []evidence.Process
+	scratch  []evidence.Process
+	trusting bool // see Trust
 }
 
 // process is what the engine knows of one process.

@@ -159,8 +159,9 @@ func remembering() Plan {
 		{Count: LastTest, Units: 1}, {Count: FirstTest, Days: 0.002}, {Count: EveryTest, Units: 90},
 	} {
 		name, r := fmt.Sprintf("c%d", i), ways[i%len(ways)]
+		gauge := Gauge{Censored: i < 6, CensoredAtMost: 0.2, Stuck: 3}
 		plan.Characteristics = append(plan.Characteristics, Characteristic{
-			Name: name, Family: posterior.NormalFamily, Lines: []string{"A", "B"}, Prior: reference, Remember: r, Retests: tests,
+			Name: name, Family: posterior.NormalFamily, Lines: []string{"A", "B"}, Prior: reference, Remember: r, Retests: tests, Gauge: gauge,
 		})
 		plan.Rules = append(plan.Rules, Rule{
 			Name: name, Claim: fmt.Sprintf("mean(%s.A) - mean(%s.B) > 0.1", name, name), Raise: 0.9, Clear: 0.5, LeastUnits: 3, Priority: "low",
@@ -188,11 +189,20 @@ func (p *plant) batch() Event {
 		}
 		for range rapid.IntRange(1, 40).Draw(p.t, "units") {
 			s.Row = append(s.Row, len(b.Rows.Line))
-			s.Value = append(s.Value, rapid.Float64Range(-5, 5).Draw(p.t, "value"))
+			s.Value = append(s.Value, rapid.OneOf(rapid.Float64Range(-5, 5), rapid.Just(1.0)).Draw(p.t, "value"))
 			b.Rows.Line = append(b.Rows.Line, len(b.Rows.Line)+2)
 			b.Rows.Serial = append(b.Rows.Serial, rapid.SampledFrom(someSerials).Draw(p.t, "serial"))
 			late := time.Duration(rapid.IntRange(-20, 200).Draw(p.t, "late")) * time.Second
 			b.Rows.Time = append(b.Rows.Time, p.clock.Add(-late).UnixNano())
+		}
+		for range rapid.IntRange(0, 3).Draw(p.t, "beyond") {
+			if !c.Gauge.Censored {
+				break
+			}
+			s.Beyond = append(s.Beyond, Bound{Row: len(b.Rows.Line), Limit: 9, Above: true})
+			b.Rows.Line = append(b.Rows.Line, len(b.Rows.Line)+2)
+			b.Rows.Serial = append(b.Rows.Serial, "")
+			b.Rows.Time = append(b.Rows.Time, p.clock.Add(-time.Duration(rapid.IntRange(-20, 200).Draw(p.t, "late"))*time.Second).UnixNano())
 		}
 		b.Series = append(b.Series, s)
 	}
@@ -333,7 +343,7 @@ func restarted(t *rapid.T, s *State, saved map[string][]byte, h History) *State 
 
 func same(t *rapid.T, name string, got, want *process, now time.Time) {
 	for _, p := range []*process{got, want} {
-		p.memory.Pass(now.UnixNano())
+		p.pass(now)
 		if err := p.write(); err != nil {
 			t.Fatal(err)
 		}
@@ -344,6 +354,11 @@ func same(t *rapid.T, name string, got, want *process, now time.Time) {
 	if got.Taken != want.Taken || got.Batches != want.Batches || got.Segment != want.Segment ||
 		!got.SegmentSince.Equal(want.SegmentSince) || !got.LastMeasured.Equal(want.LastMeasured) || !got.LastTaken.Equal(want.LastTaken) {
 		t.Errorf("%s: %+v, want %+v", name, got, want)
+	}
+	gauge, err := json.Marshal(got.Gauge)
+	wanted, err2 := json.Marshal(want.Gauge)
+	if err := errors.Join(err, err2); err != nil || !bytes.Equal(gauge, wanted) {
+		t.Errorf("%s: gauge %s, want %s, %v", name, gauge, wanted, err)
 	}
 	if want.tests == nil {
 		return

@@ -92,12 +92,15 @@ var noun = map[claim.Kind]string{
 	claim.Bias: "the rig's offset",
 }
 
-func (t *teller) single() string {
+func (t *teller) single() string { return t.subject() + " is " + t.bounds() }
+
+// subject is the one quantity that the claim is about.
+func (t *teller) subject() string {
 	subject := fmt.Sprintf("on %s, %s", t.line(0), noun[t.c.Kind])
 	if t.c.Kind == claim.Bias {
 		subject = fmt.Sprintf("%s of %s", noun[t.c.Kind], t.line(0))
 	}
-	return subject + " is " + t.bounds()
+	return subject
 }
 
 // bounds is the comparison with the bound, or bounds, of the claim.
@@ -176,6 +179,10 @@ func (t *teller) difference() string {
 }
 
 func (t *teller) absolute() string {
+	if len(t.c.Terms) == 1 && t.c.Test != claim.Within {
+		where := map[claim.Test]string{claim.Above: "more than %s away from 0", claim.Below: "within %s of 0"}[t.c.Test]
+		return t.subject() + " is " + fmt.Sprintf(where, t.amount(t.c.Bound))
+	}
 	if !t.plainDifference() {
 		return fmt.Sprintf("%s holds", t.c)
 	}

@@ -92,6 +92,8 @@ func drive(c *Content, entries []*store.Entry) (*driven, error) {
 		return nil, fmt.Errorf("the time zone of the exhibit: %w", err)
 	}
 	slow := rules.NewState()
+	d.state.Trust() // what is on the page was counted, on more than is on the page
+	slow.Trust()
 	d.state.Consult(history(entries))
 	slow.Consult(history(entries))
 	for _, e := range entries {
@@ -131,7 +133,7 @@ func drive(c *Content, entries []*store.Entry) (*driven, error) {
 // page, and answers belong to alarms by numbers that only the whole journal gives.
 func drivable(e *rules.Event) (*rules.Event, bool) {
 	switch {
-	case e.Withdrawn != nil, e.Acknowledged != nil, e.Decided != nil:
+	case e.Withdrawn != nil, e.Acknowledged != nil, e.Decided != nil, e.Moment != nil:
 		return nil, false
 	case e.Batch != nil && len(e.Batch.Replaces) > 0:
 		event, batch := *e, *e.Batch
@@ -182,7 +184,9 @@ func (d *driven) cross(slow *rules.State) error {
 	if err != nil {
 		return err
 	}
-	d.rule = d.plan.Rules[i]
+	if d.rule = d.plan.Rules[i]; d.rule.Quiet != nil {
+		return errors.New("its rule waits for something to be counted and was raised by the clock: there are no measurements to show")
+	}
 	ofRule := func(looks []rules.Look) (rules.Look, error) {
 		for _, l := range looks {
 			if l.Rule == i {
@@ -299,12 +303,20 @@ func oneRow(b *rules.Batch, row int) *rules.Batch {
 	}
 	one.Series = nil
 	for _, s := range b.Series {
+		part := rules.Series{Process: s.Process}
+		for _, r := range s.Beyond {
+			if r.Row == row {
+				part.Beyond = []rules.Bound{{Limit: r.Limit, Above: r.Above}}
+			}
+		}
 		i, ok := slices.BinarySearch(s.Row, row)
-		if !ok {
+		if !ok && part.Beyond == nil {
 			continue
 		}
-		part := rules.Series{Process: s.Process, Row: []int{0}, Value: s.Value[i : i+1]}
-		if s.Of != nil {
+		if ok {
+			part.Row, part.Value = []int{0}, s.Value[i:i+1]
+		}
+		if ok && s.Of != nil {
 			part.Of = s.Of[i : i+1]
 		}
 		one.Series = append(one.Series, part)
