@@ -4,6 +4,9 @@ import (
 	"bytes"
 	"encoding/json"
 	"time"
+
+	"steelyard/monitor/config"
+	"steelyard/store"
 )
 
 // signEvery is how often a running daemon signs what was added to the journal, whether or not a message or a
@@ -31,6 +34,16 @@ func (d *Desk) sign() {
 	if _, err := d.store.Checkpoint(); err != nil {
 		d.log.Error().Err(err).Msg("sign a checkpoint of the journal")
 	}
+}
+
+// BeginOrigin has the store of a configuration go on under a new origin and key, which is noted in it for good: the way on
+// where it is not what was signed.
+func BeginOrigin(cfg *config.Config, why string) error {
+	s, err := store.Open(cfg.Site.State, store.Options{NewOrigin: &store.NewOrigin{Why: why, By: Whoever(), At: time.Now().UTC()}})
+	if err != nil {
+		return err
+	}
+	return s.Close()
 }
 
 // Backedup is what came of a backup.

@@ -408,6 +408,9 @@ func (s *State) applyAdopted(e *Event) (Outcomes, error) {
 		return Outcomes{}, err
 	}
 	var out Outcomes
+	if len(s.ready) > 0 || len(s.plan.Characteristics) > 0 {
+		out.Remarks = differences(&s.plan, &plan)
+	}
 	before := s.ready
 	s.plan = plan
 	s.touched[planPiece] = true

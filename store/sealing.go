@@ -76,7 +76,7 @@ func (s *Store) openSealing(anew *NewOrigin) error {
 }
 
 // wayOn ends the sentence of a refusal.
-const wayOn = "find out why; then put the right files back, or go on under a new origin, which is noted in the store for good"
+const wayOn = "find out why; then put the right files back, or go on under a new origin (run --new-origin WHY), which is noted in the store for good"
 
 // beginOrigin makes a key, and notes the origin with it. The first origin of a store is the
 // UUID it was made with. The key is on the disk before the store tells of it: a stop between

@@ -17,7 +17,9 @@ import (
 	"steelyard/rules"
 )
 
-type runVerb struct{}
+type runVerb struct {
+	NewOrigin string `placeholder:"WHY" help:"Go on under a new origin and key, where the store is not what was signed: a copy was restored, or the key is lost. It is noted for good, with the reason."`
+}
 
 // Run watches until a signal ends it: the first ends in order, the second at once. SIGHUP reads
 // the configuration again; one with faults leaves the old one in force.
@@ -33,6 +35,12 @@ func (v *runVerb) Run(d *desk) error {
 	reload := make(chan os.Signal, 1)
 	signal.Notify(reload, syscall.SIGHUP)
 	defer signal.Stop(reload)
+	if v.NewOrigin != "" {
+		if err := monitor.BeginOrigin(cfg, v.NewOrigin); err != nil {
+			return err
+		}
+		log.Warn().Str("why", v.NewOrigin).Msg("the record goes on under a new origin and key")
+	}
 	for {
 		next, err := d.watch(ctx, cfg, reload, log)
 		if err != nil || next == nil {
