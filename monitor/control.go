@@ -33,6 +33,7 @@ type Counter interface {
 	Decide(q Decision) (*HeldDecided, error)
 	Backup(folder string) (*Backedup, error)
 	Exhibit(alarm int) (page []byte, err error)
+	Export(q Export, w io.Writer) error
 	Close() error
 }
 
@@ -166,6 +167,17 @@ func (d *Desk) handler() http.Handler {
 			reply(w, page, err)
 		}
 	})
+	mux.HandleFunc("POST /export", func(w http.ResponseWriter, r *http.Request) {
+		var q Export
+		if !ask(w, r, &q) {
+			return
+		}
+		if err := d.Export(q, w); err != nil {
+			// What is written already can't be taken back: the asker sees that it broke off.
+			d.log.Error().Err(err).Msg("export")
+			panic(http.ErrAbortHandler)
+		}
+	})
 	mux.HandleFunc("POST /backup", func(w http.ResponseWriter, r *http.Request) {
 		var q struct{ Folder string }
 		if ask(w, r, &q) {
@@ -255,6 +267,29 @@ func (r *remote) call(method, path string, question, answer any) error {
 		return errors.New(strings.TrimSpace(string(text)))
 	}
 	return json.Unmarshal(text, answer)
+}
+
+// stream passes an answer of any length on; it takes as long as it takes.
+func (r *remote) stream(path string, question any, w io.Writer) error {
+	body, err := json.Marshal(question)
+	if err != nil {
+		return err
+	}
+	client := *r.client
+	client.Timeout = 0
+	resp, err := client.Post("http://steelyard"+path, "application/json", bytes.NewReader(body))
+	if err != nil {
+		return fmt.Errorf("the running daemon did not answer: %w", err)
+	}
+	defer resp.Body.Close()
+	if resp.StatusCode != http.StatusOK {
+		text, _ := io.ReadAll(resp.Body)
+		return errors.New(strings.TrimSpace(string(text)))
+	}
+	if _, err := io.Copy(w, resp.Body); err != nil {
+		return fmt.Errorf("the running daemon broke off: %w", err)
+	}
+	return nil
 }
 
 func (r *remote) Status() (*Status, error) {

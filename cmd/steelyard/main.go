@@ -38,6 +38,7 @@ type commandLine struct {
 	Held        heldVerb        `cmd:"" help:"What was not counted and waits: list, show, decide."`
 	Verify      verifyVerb      `cmd:"" help:"Show that the record was not changed, and that every outcome follows from it."`
 	Backup      backupVerb      `cmd:"" help:"Copy the store, also while the daemon runs."`
+	Export      exportVerb      `cmd:"" help:"Write measurements, looks or crossings as CSV or JSON lines."`
 	Weigh       weighVerb       `cmd:"" help:"Weigh a claim once, on given figures."`
 }
 
