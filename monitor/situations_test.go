@@ -203,7 +203,7 @@ path = "leads.jsonl"
 	clock.by.Store(int64(6 * 24 * time.Hour)) // L4 runs one day a week: 24 hours are less than 30
 	d.until("the clock is seen to step again", func(s *Status) bool { return s.Stepped.Is.Sub(s.Stepped.Was) > 24*time.Hour })
 	drop(t, cfg.Sources[0].Folder, "b.csv", rows("L1", 5, 1, 33))
-	st = d.until("it has returned", func(s *Status) bool { return len(s.Alarms) == 1 && s.Alarms[0].State == rules.Returned })
+	d.until("it has returned", func(s *Status) bool { return len(s.Alarms) == 1 && s.Alarms[0].State == rules.Returned })
 	d.until("the feed is told", func(s *Status) bool { return s.Feeds[0].Waiting == 0 })
 	told := messages(t, cfg.Feeds[0].Path)
 	if len(told) != 2 {
@@ -211,6 +211,12 @@ path = "leads.jsonl"
 	}
 	says(t, told[0].Data.Text, "line L1: nothing has been counted for 20h", "Look first at: whether L1 runs", rules.ReleaseNote)
 	says(t, told[1].Data.Text, "line L1: something has been counted again")
+	if x, err := d.Explain(1); err != nil || x.Rule.Quiet == nil || len(x.Steps) != 2 {
+		t.Errorf("%+v, %v", x, err)
+	}
+	if _, err := d.Exhibit(1); err == nil || !strings.Contains(err.Error(), "raised by the clock") {
+		t.Errorf("an exhibit of an alarm without measurements: %v", err)
+	}
 	_, text := d.log()
 	says(t, text, "something has been counted again", "does not replace the site's release procedures")
 	d.follows()
