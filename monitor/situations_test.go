@@ -211,6 +211,12 @@ path = "leads.jsonl"
 	}
 	says(t, told[0].Data.Text, "line L1: nothing has been counted for 20h", "Look first at: whether L1 runs", rules.ReleaseNote)
 	says(t, told[1].Data.Text, "line L1: something has been counted again")
+	if x, err := d.Explain(1); err != nil || x.Rule.Quiet == nil || len(x.Steps) != 2 {
+		t.Errorf("%+v, %v", x, err)
+	}
+	if _, err := d.Exhibit(1); err == nil || !strings.Contains(err.Error(), "raised by the clock") {
+		t.Errorf("an exhibit of an alarm without measurements: %v", err)
+	}
 	_, text := d.log()
 	says(t, text, "something has been counted again", "does not replace the site's release procedures")
 	d.follows()

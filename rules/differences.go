@@ -14,6 +14,7 @@ func differences(before, now *Plan) (words []string) {
 		words = append(words, fmt.Sprintf("the site is called %q, and was called %q", now.Site, before.Site))
 	}
 	words = append(words, named("characteristic", before.Characteristics, now.Characteristics, func(c Characteristic) string { return c.Name })...)
+	words = append(words, named("offset of rig", before.Offsets, now.Offsets, func(o Offset) string { return o.Name })...)
 	return append(words, named("rule", before.Rules, now.Rules, func(r Rule) string { return r.Name })...)
 }
 

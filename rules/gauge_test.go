@@ -56,7 +56,7 @@ func TestCensoredWithholdsTheMean(t *testing.T) {
 		t.Errorf("withheld %q, want %q", l.Withheld, want)
 	}
 	st := standingOf(d.s, "head.L4")
-	if st.Estimate != nil || !strings.Contains(st.Why, "3 of the 20") || st.Beyond.N != 3 || st.Beyond.Of != 20 || st.Units != 18 {
+	if st.Estimate != nil || !strings.Contains(st.Why, "beyond the gauge") || !strings.Contains(st.Notes()[0], "3 of the 20") || st.Beyond.N != 3 || st.Beyond.Of != 20 || st.Units != 18 {
 		t.Errorf("standing %+v", st)
 	}
 	out = d.apply(batch("head.L4", spread(33, 20)...))

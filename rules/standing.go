@@ -83,6 +83,8 @@ func (s *State) standing(name string, c *Characteristic) Standing {
 	}
 	q, err := s.Centre(name)
 	switch {
+	case st.Beyond != nil && st.Beyond.Share() > st.Beyond.AtMost:
+		st.Why = "too many readings lie beyond the gauge's limits" // Notes have the figures
 	case err != nil:
 		st.Why = strings.TrimPrefix(err.Error(), name+": ")
 	case !finite(q.Median, q.Lower, q.Upper):

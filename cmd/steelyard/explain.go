@@ -73,16 +73,24 @@ func (v *explainVerb) writeExhibit(d *desk, c monitor.Counter, alarm int) error 
 func printExplanation(w io.Writer, x *monitor.Explanation, zone *time.Location) error {
 	at := func(t time.Time) string { return clock(t, zone) }
 	fmt.Fprintf(w, "%s, %s: %s\n\n", x.Site, x.Alarm, x.Says)
-	fmt.Fprintf(w, "Rule %q, version %s\n  claim %s\n  raise %v, clear %v, least units %d, priority %s, told: %s\n",
-		x.Rule.Name, x.Version, x.Rule.Claim, x.Rule.Raise, x.Rule.Clear, x.Rule.LeastUnits, x.Rule.Priority,
-		strings.Join(x.Rule.Tell, ", "))
+	fmt.Fprintf(w, "Rule %q, version %s\n", x.Rule.Name, x.Version)
+	if x.Rule.Quiet != nil {
+		fmt.Fprintf(w, "  waits for something to be counted, priority %s, told: %s\n", x.Rule.Priority, strings.Join(x.Rule.Tell, ", "))
+	} else {
+		fmt.Fprintf(w, "  claim %s\n  raise %v, clear %v, least units %d, priority %s, told: %s\n",
+			x.Rule.Claim, x.Rule.Raise, x.Rule.Clear, x.Rule.LeastUnits, x.Rule.Priority, strings.Join(x.Rule.Tell, ", "))
+	}
 	for _, p := range x.Priors {
 		fmt.Fprintf(w, "  %s: %s family, prior %s, remembers %s%s\n", p.Characteristic, p.Family, plainJSON(p.Prior), plainJSON(p.Remember), testsText(p.Tests))
 	}
 	fmt.Fprintf(w, "  in force since %s (record %d): configuration %s, SHA-256 %s, adopted by %s\n",
 		at(x.Adopted.At), x.Adopted.Record, x.Adopted.File, x.Adopted.Digest, x.Adopted.By)
 	cr := &x.Crossing
-	fmt.Fprintf(w, "\nIt crossed %v at %s (record %d): probability %.17g, contrary %.17g\n", cr.Raise, at(cr.At), cr.Record, cr.Probability, cr.Contrary)
+	if x.Rule.Quiet != nil {
+		fmt.Fprintf(w, "\nIt was raised by the clock at %s (record %d): it rests on no measurement\n", at(cr.At), cr.Record)
+	} else {
+		fmt.Fprintf(w, "\nIt crossed %v at %s (record %d): probability %.17g, contrary %.17g\n", cr.Raise, at(cr.At), cr.Record, cr.Probability, cr.Contrary)
+	}
 	if cr.File != "" {
 		fmt.Fprintf(w, "  with file %s of %s, %d rows, lines %d to %d, SHA-256 %s\n", cr.File, cr.Source, cr.Rows, cr.FirstLine, cr.LastLine, cr.SHA256)
 	}

@@ -3,6 +3,7 @@ package main
 import (
 	"fmt"
 	"slices"
+	"strconv"
 	"strings"
 	"time"
 
@@ -145,8 +146,8 @@ func (r *sample) series(d *desk) {
 	for _, s := range r.Batch.Series {
 		unit := ""
 		if o, ok := r.plan.OffsetNamed(s.Process); ok {
-			d.line("  offset of rig %s: %d readings of reference parts, read minus certified from %v to %v %s",
-				s.Process, len(s.Value), slices.Min(s.Value), slices.Max(s.Value), o.Unit)
+			d.line("  offset of rig %s: %s of reference parts, read minus certified from %s to %s %s",
+				s.Process, many(len(s.Value), "reading"), short(slices.Min(s.Value)), short(slices.Max(s.Value)), o.Unit)
 			continue
 		}
 		for _, c := range r.plan.Characteristics {
@@ -154,17 +155,17 @@ func (r *sample) series(d *desk) {
 				unit = c.Unit
 			}
 		}
-		text := fmt.Sprintf("  %s: %d values", s.Process, len(s.Value))
+		text := fmt.Sprintf("  %s: %s", s.Process, many(len(s.Value), "value"))
 		if len(s.Value) > 0 {
 			text += fmt.Sprintf(" from %v to %v %s", slices.Min(s.Value), slices.Max(s.Value), unit)
 		}
 		if len(s.Beyond) > 0 {
-			text += fmt.Sprintf(", and %d readings beyond the gauge's limits", len(s.Beyond))
+			text += fmt.Sprintf(", and %s beyond the gauge's limits", many(len(s.Beyond), "reading"))
 		}
 		d.line("%s", text)
 	}
 	for _, a := range r.Batch.Aside {
-		d.line("  left out: %d rows with the %s %q, lines %d to %d", a.Rows, a.Kind, a.Text, a.First, a.Last)
+		d.line("  left out: %s with the %s %q, lines %d to %d", many(a.Rows, "row"), a.Kind, a.Text, a.First, a.Last)
 	}
 }
 
@@ -188,7 +189,7 @@ func (r *sample) row(row *rowOfASample) string {
 	for _, v := range row.Values {
 		switch {
 		case v.Part:
-			text += fmt.Sprintf(" reference part, offset of rig %s %v", v.Process, v.Value)
+			text += fmt.Sprintf(" reference part, offset of rig %s %s", v.Process, short(v.Value))
 		case v.Beyond != "":
 			text += fmt.Sprintf(" %s %s %v, beyond the gauge", v.Process, v.Beyond, v.Value)
 		case v.Of != 0:
@@ -199,3 +200,14 @@ func (r *sample) row(row *rowOfASample) string {
 	}
 	return text
 }
+
+// many is a number of things.
+func many(n int, thing string) string {
+	if n == 1 {
+		return "1 " + thing
+	}
+	return fmt.Sprintf("%d %ss", n, thing)
+}
+
+// short leaves out the last digits of a difference, which say how float64 rounds and nothing else.
+func short(x float64) string { return strconv.FormatFloat(x, 'g', 10, 64) }

@@ -53,9 +53,9 @@ certified = 33.5
 	}
 	for _, want := range []string{
 		"a.csv, as source rig1 reads it: 3 rows counted, 1 held, 2 left out, 1 without a value",
-		"head.L1: 1 values from 33.4 to 33.4 kPa, and 1 readings beyond the gauge's limits",
-		"offset of rig rig1: 1 readings of reference parts, read minus certified from 0.25 to 0.25 kPa",
-		`left out: 1 rows with the fault code "E17", lines 4 to 4`,
+		"head.L1: 1 value from 33.4 to 33.4 kPa, and 1 reading beyond the gauge's limits",
+		"offset of rig rig1: 1 reading of reference parts, read minus certified from 0.25 to 0.25 kPa",
+		`left out: 1 row with the fault code "E17", lines 4 to 4`,
 		"columns that nothing is mapped to: Operator",
 		"head.L1 = 33.4", "head.L1 above 200, beyond the gauge", "line 4 left out: fault code E17", "line 5 left out: variant K9",
 		"REF-7 reference part, offset of rig rig1 0.25", "line 7 HELD: a.csv, line 7: column 1 (\"At\"): read", "expected a time at most 1h0m ahead",

@@ -2,6 +2,7 @@ package config
 
 import (
 	"errors"
+	"os"
 	"slices"
 	"strings"
 	"testing"
@@ -162,6 +163,33 @@ func TestRowwiseFaults(t *testing.T) {
 		var faults Faults
 		if !errors.As(err, &faults) || !strings.Contains(err.Error(), c.says) {
 			t.Errorf("%q for %q: %v, want it to say %q", c.to, c.from, err, c.says)
+		}
+	}
+}
+
+// What README.md shows of it is a whole configuration, and so is the example.
+func TestReadmeSample(t *testing.T) {
+	text, err := os.ReadFile("../../README.md")
+	if err != nil {
+		t.Fatal(err)
+	}
+	_, section, ok := strings.Cut(string(text), "## What rigs really drop\n")
+	_, section, ok2 := strings.Cut(section, "the tests read it.\n")
+	section, _, ok3 := strings.Cut(section, "\n- ")
+	if !ok || !ok2 || !ok3 {
+		t.Fatal("README.md has no such sample")
+	}
+	sample, err := Parse("README.md", []byte(section), "/plant")
+	if err != nil {
+		t.Fatal(err)
+	}
+	example, err := Load("../../config.example.toml")
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, cfg := range []*Config{sample, example} {
+		if _, err := rules.NewState().Apply(&rules.Event{Adopted: &rules.Adopted{Plan: cfg.Plan}}); err != nil || len(cfg.Plan.Offsets) == 0 || len(cfg.Runs) == 0 {
+			t.Errorf("%s: %v, %+v", cfg.File, err, cfg.Plan.Offsets)
 		}
 	}
 }

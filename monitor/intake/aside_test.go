@@ -218,3 +218,22 @@ func FuzzRowwise(f *testing.F) {
 		}
 	})
 }
+
+// The same in JSON lines: a member for each column, and none for a fault where there was none.
+func TestRowsAboutSomethingElseInJSON(t *testing.T) {
+	r, cfg := rowwise(t)
+	r.src.Form.Rows, r.src.Form.Decimal = "json lines", '.'
+	g := r.Read("r.csv", written, []byte(`{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"a","Head":33.4,"Type":"K7"}
+{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"b","Head":">200","Type":"K7","Code":null}
+{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"c","Head":0,"Type":"K7","Code":"E17"}
+{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"d","Head":33,"Type":"K9"}
+{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"REF-7","Head":33.75,"Type":"K7"}
+{"At":"2026-03-02T10:00:00Z","Line":"L1","Serial":"e","Head":33}
+`))
+	expect(t, accountOf(g, &cfg.Plan), `1 head.L1 33.4
+2 head.L1 above 200
+3 left out: fault code E17
+4 left out: variant K9
+5 rig1 0.25
+6 held: the object has no member "Type"; expected one`)
+}

@@ -123,13 +123,14 @@ func (r *records) put(at int, member string, value json.RawMessage) (sentence st
 	return ""
 }
 
-// lacks finds a member that a row can't do without, and makes the others that are not there empty.
+// lacks finds a member that a row can't do without, and makes the others that are not there empty: where no
+// fault is named there was none.
 func (p *pass) lacks() (member string, missing bool) {
 	for i := range p.recs.fields {
 		if p.recs.fields[i].from >= 0 {
 			continue
 		}
-		if i == p.at.time || i == p.at.line || i == p.at.serial || i == p.at.fault || i == p.at.variant {
+		if i == p.at.time || i == p.at.line || i == p.at.serial || i == p.at.variant {
 			return p.names[i], true
 		}
 		n := len(p.recs.undone)
