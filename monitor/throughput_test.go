@@ -155,3 +155,25 @@ func BenchmarkThroughput(b *testing.B) {
 		})
 	}
 }
+
+// running is a daemon for the length of a benchmark.
+func running(b *testing.B, cfg *config.Config) *Desk {
+	desk, err := Open(cfg, Options{Log: zerolog.Nop()})
+	if err != nil {
+		b.Fatal(err)
+	}
+	ctx, end := context.WithCancel(context.Background())
+	ready, done := make(chan struct{}), make(chan error, 1)
+	go func() { done <- desk.Run(ctx, ready) }()
+	<-ready
+	b.Cleanup(func() {
+		end()
+		if err := <-done; err != nil {
+			b.Error(err)
+		}
+		if err := desk.Close(); err != nil {
+			b.Error(err)
+		}
+	})
+	return desk
+}
