@@ -691,3 +691,30 @@ func TestEmptyMountPoint(t *testing.T) {
 	}
 	d.follows()
 }
+
+// A stretch of a growing file that the engine refuses is held, and the file goes on behind it; also over a start.
+func TestStuckStretchOfAGrowingFile(t *testing.T) {
+	d, folder := shop{source: `arrives = "growing"`, characteristic: `stuck = { values = 5, then = "hold" }`}.opened(t)
+	path := filepath.Join(folder, "day.csv")
+	add := func(text string) {
+		t.Helper()
+		file, err := os.OpenFile(path, os.O_APPEND|os.O_CREATE|os.O_WRONLY, 0o644)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if _, err := file.WriteString(text); errors.Join(err, file.Close()) != nil {
+			t.Fatal(err)
+		}
+	}
+	add("Line,Serial,Head kPa\nL1,a,33.1\nL1,b,33.2\n")
+	d.until("the first rows are counted", func(s *Status) bool { return unitsOf(s, "head.L1") == 2 })
+	add(strings.Repeat("L1,c,33.3\n", 5))
+	st := d.held(1)
+	says(t, st.Sources[0].Remark, "head.L1 reads one value 5 times running (33.3)")
+	cfg := d.cfg
+	d.stop()
+	d = start(t, cfg)
+	add("L1,d,33.4\n")
+	d.until("what follows is counted", func(s *Status) bool { return unitsOf(s, "head.L1") == 3 })
+	d.follows()
+}
