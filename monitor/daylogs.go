@@ -34,24 +34,21 @@ func (d *Desk) DayLog(label string) (*daylog.Log, error) {
 // dayLog drives a fresh engine with the journal up to the end of the day, and collects the
 // records that fall into it.
 func (d *Desk) dayLog(day daylog.Day, now time.Time) (*daylog.Log, error) {
-	from, err := d.store.FirstAt(day.From)
-	if err != nil {
-		return nil, err
-	}
-	to, err := d.store.FirstAt(day.To)
+	to, err := d.endOf(day)
 	if err != nil {
 		return nil, err
 	}
 	state := d.replaying()
 	var collector *daylog.Collector
 	err = d.store.Journal(0, to, func(e rules.Event, out rules.Outcomes) error {
-		if e.Index >= from && collector == nil {
+		within := !e.At.Before(day.From) && e.At.Before(day.To)
+		if within && collector == nil {
 			collector = daylog.NewCollector(day, state.Plan(), d.cfg.Site.Zone)
 		}
 		if _, err := state.Apply(&e); err != nil {
 			return fmt.Errorf("record %d: %w", e.Index, err)
 		}
-		if collector != nil {
+		if within {
 			collector.Add(&e, &out)
 		}
 		return nil
@@ -63,6 +60,20 @@ func (d *Desk) dayLog(day daylog.Day, now time.Time) (*daylog.Log, error) {
 		collector = daylog.NewCollector(day, state.Plan(), d.cfg.Site.Zone)
 	}
 	return collector.Finish(state, now), nil
+}
+
+// endOf is the index behind the last record that was taken in before the end of a day. Times do not always ascend in the
+// journal: a clock may have been set back.
+func (d *Desk) endOf(day daylog.Day) (to uint64, err error) {
+	if to, err = d.store.FirstAt(day.To); err != nil {
+		return 0, err
+	}
+	return to, d.store.Journal(to, d.store.Next(), func(e rules.Event, _ rules.Outcomes) error {
+		if e.At.Before(day.To) {
+			to = e.Index + 1
+		}
+		return nil
+	})
 }
 
 // WriteDayLog makes the log of a day and writes it into the folder of day logs, as Markdown

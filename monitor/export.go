@@ -10,6 +10,7 @@ import (
 	"strconv"
 	"strings"
 	"time"
+	"unicode/utf8"
 
 	"steelyard/monitor/feed"
 	"steelyard/rules"
@@ -55,14 +56,7 @@ func (d *Desk) Export(q Export, w io.Writer) error {
 			return err
 		}
 	}
-	to := d.store.Next()
-	if !q.To.IsZero() {
-		var err error
-		if to, err = d.store.FirstAt(q.To); err != nil {
-			return err
-		}
-	}
-	if err := d.store.Journal(0, to, x.record); err != nil {
+	if err := d.store.Journal(0, d.store.Next(), x.record); err != nil {
 		return err
 	}
 	x.csv.Flush()
@@ -85,7 +79,8 @@ func (x *exporter) record(e rules.Event, out rules.Outcomes) error {
 	if e.Adopted != nil {
 		x.plan = e.Adopted.Plan
 	}
-	if e.At.Before(x.q.From) {
+	// Each by its own time: a clock may have been set back, so that times do not always ascend.
+	if e.At.Before(x.q.From) || !x.q.To.IsZero() && !e.At.Before(x.q.To) {
 		return nil
 	}
 	switch x.q.What {
@@ -199,9 +194,11 @@ func (x *exporter) row(values ...any) error {
 	return x.csv.Write(fields)
 }
 
-// noFormula marks a text that a spreadsheet would take for a formula as text.
+// noFormula marks a text that a spreadsheet would take for a formula as text: one that begins with = + - @, in either
+// width, or with a sign that can't be seen.
 func noFormula(text string) string {
-	if text != "" && strings.ContainsRune("=+-@\t\r", rune(text[0])) {
+	first, _ := utf8.DecodeRuneInString(text)
+	if text != "" && (first < ' ' || strings.ContainsRune("=+-@＝＋－＠", first)) {
 		return "'" + text
 	}
 	return text

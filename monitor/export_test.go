@@ -8,6 +8,8 @@ import (
 	"strings"
 	"testing"
 	"time"
+
+	"steelyard/monitor/daylog"
 )
 
 // What is exported is what was counted, digit for digit, from a running daemon and from its store; and no cell is a formula.
@@ -72,5 +74,37 @@ func TestExport(t *testing.T) {
 		if err := from.Export(Export{What: "everything", Form: "csv"}, &out); err == nil {
 			t.Error("a kind that there is not")
 		}
+	}
+}
+
+// A clock that is set back loses nothing: each record goes by its own time, in the export and in the day log.
+func TestExportWhereTheClockWasSetBack(t *testing.T) {
+	cfg := plant(t, twoLines)
+	clock := &shifted{}
+	d := startBy(t, cfg, clock.now)
+	clock.by.Store(int64(2 * time.Hour))
+	drop(t, cfg.Sources[0].Folder, "a.csv", rows("L1", 0, 5, 33))
+	d.until("the first is counted", func(s *Status) bool { return s.Sources[0].Counted == 1 })
+	clock.by.Store(0)
+	drop(t, cfg.Sources[0].Folder, "b.csv", rows("L4", 50, 7, 33))
+	d.until("the second is counted", func(s *Status) bool { return s.Sources[0].Counted == 2 })
+	var out bytes.Buffer
+	if err := d.Export(Export{What: "measurements", Form: "csv", To: time.Now().Add(time.Hour)}, &out); err != nil || strings.Count(out.String(), "\n") != 8 {
+		t.Errorf("%v: %s", err, out.String())
+	}
+	day := daylog.DayOf(time.Now(), cfg.Site.Zone, cfg.Site.DayStarts)
+	rowsIn := func(label string) (n int) {
+		log, err := d.DayLog(label)
+		if err != nil {
+			return 0 // tomorrow, which has not begun
+		}
+		for _, s := range log.Sources {
+			n += s.Rows
+		}
+		return n
+	}
+	next := daylog.DayOf(day.To.Add(time.Hour), cfg.Site.Zone, cfg.Site.DayStarts)
+	if clock.by.Store(int64(24 * time.Hour)); rowsIn(day.Label)+rowsIn(next.Label) != 12 {
+		t.Errorf("the day logs have %d and %d of 12 rows", rowsIn(day.Label), rowsIn(next.Label))
 	}
 }

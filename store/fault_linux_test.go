@@ -18,6 +18,8 @@ import (
 	"time"
 
 	"golang.org/x/sys/unix"
+
+	"steelyard/rules"
 )
 
 var long = flag.Bool("long", false, "sweep every write and sync, and kill more often")
@@ -28,6 +30,7 @@ const (
 	childFolder  = "STEELYARD_TEST_FOLDER"
 	childCommits = "STEELYARD_TEST_COMMITS"
 	childLimit   = "STEELYARD_TEST_FILE_LIMIT" // bytes
+	childSeals   = "STEELYARD_TEST_SEALS"      // moves older records into volumes, where set
 )
 
 func TestMain(m *testing.M) {
@@ -70,6 +73,12 @@ func commitAll(folder string) int {
 			return 3
 		}
 		fmt.Println("done", s.Next())
+		if os.Getenv(childSeals) != "" && s.Next()%12 == 0 {
+			if err := sealSome(s); err != nil {
+				fmt.Println("failed:", err)
+				return 3
+			}
+		}
 		if s.Next()%2 == 1 {
 			continue
 		}
@@ -84,6 +93,20 @@ func commitAll(folder string) int {
 		return 1
 	}
 	return 0
+}
+
+// sealSome moves all but the last records into a volume.
+func sealSome(s *Store) error {
+	v, err := s.WriteVolume(s.Next() - 3)
+	if err != nil || v == nil {
+		return err
+	}
+	e := rules.Event{Index: s.Next(), Sealed: &rules.Sealed{From: v.From, To: v.To, File: v.File, SHA256: v.SHA256}}
+	if err := s.Commit(Step{Entries: []Entry{{Event: e}}, Sealed: v}); err != nil {
+		return err
+	}
+	fmt.Println("done", s.Next())
+	return nil
 }
 
 // numbered is the step that record number Next is in, with a piece of state of 20 kB.
