@@ -54,7 +54,9 @@ type Desk struct {
 	lastCounted time.Time      // when a batch was last counted, on the monotonic clock
 	clock       *rules.Stepped // the last step of the clock on the wall since the start
 
-	told map[string]chan struct{} // a feed has messages; capacity 1
+	told   map[string]chan struct{} // a feed has messages; capacity 1
+	broken chan error               // the store failed away from the writer; capacity 1
+	disk   DiskStatus
 }
 
 // Options are what a Desk is opened with; the zero value serves.
@@ -75,7 +77,7 @@ func Open(cfg *config.Config, o Options) (*Desk, error) {
 	}
 	d := &Desk{
 		cfg: cfg, log: o.Log, now: o.Now, store: s,
-		sources: map[string]*SourceStatus{}, told: map[string]chan struct{}{}, trouble: map[string]string{},
+		sources: map[string]*SourceStatus{}, told: map[string]chan struct{}{}, broken: make(chan error, 1), disk: DiskStatus{Free: -1}, trouble: map[string]string{},
 	}
 	for _, src := range cfg.Sources {
 		d.sources[src.Name] = &SourceStatus{Name: src.Name, Folder: src.Folder, Able: true}

@@ -82,6 +82,9 @@ func (d *Desk) Run(ctx context.Context, ready chan<- struct{}) error {
 		close(ready)
 	}
 	err = d.write(ctx, gathered, known)
+	if err != nil {
+		d.announce(countingStopped, "nothing is counted any more", "Storage failed, and the program has stopped: "+err.Error())
+	}
 	stop()
 	err = errors.Join(err, server.Close())
 	helpers.Wait()
@@ -182,6 +185,8 @@ func (d *Desk) write(ctx context.Context, gathered <-chan []intake.Arrival, know
 		select {
 		case <-ctx.Done():
 			return nil
+		case err := <-d.broken:
+			return err
 		case list := <-gathered:
 			for part := range apart(list) {
 				if err := d.takePart(part, known); err != nil {
@@ -442,6 +447,11 @@ func (d *Desk) keepTime(ctx context.Context) {
 		case <-tick.C:
 		}
 		now := d.now()
+		if err := d.store.Failure(); err != nil {
+			d.broke(err)
+			return
+		}
+		d.watchDisk()
 		if err := d.store.Alive(now); err != nil {
 			d.log.Error().Err(err).Msg("note that the daemon is alive")
 		}

@@ -22,6 +22,7 @@ type Status struct {
 	Feeds     []FeedStatus         `json:"feeds"`
 	Waiting   HeldStatus           `json:"held"`
 	Stepped   *rules.Stepped       `json:"stepped,omitempty"` // the last step of the clock on the wall since the start
+	Disk      DiskStatus           `json:"disk"`
 	Caution   string               `json:"caution"`
 }
 
@@ -60,7 +61,7 @@ func (d *Desk) Status() (*Status, error) {
 	st := &Status{
 		Type: "status", Site: plan.Site, Now: d.now(), Program: Program(), Records: d.store.Next(),
 		Alarms: d.state.Alarms(), Rules: d.state.RuleStandings(), Processes: d.state.Standings(),
-		Stepped: d.clock, Caution: rules.ReleaseNote,
+		Stepped: d.clock, Disk: d.disk, Caution: rules.ReleaseNote,
 	}
 	st.LastAlive, _ = d.store.LastAlive()
 	for _, src := range d.cfg.Sources {

@@ -23,3 +23,12 @@ func refuseNetwork(folder string) error {
 	}
 	return nil
 }
+
+// Free is how many bytes the account may still write on the disk of a folder; -1 where that can't be told.
+func Free(folder string) int64 {
+	var st unix.Statfs_t
+	if err := unix.Statfs(folder, &st); err != nil {
+		return -1
+	}
+	return int64(st.Bavail) * st.Bsize
+}

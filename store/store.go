@@ -280,6 +280,9 @@ func (s *Store) Next() uint64 {
 	return s.next
 }
 
+// Failure is the first storage error, after which the store does nothing more; nil where there was none.
+func (s *Store) Failure() error { return s.failure() }
+
 func (s *Store) failure() error {
 	s.mu.Lock()
 	defer s.mu.Unlock()

@@ -46,6 +46,9 @@ func printStatus(w io.Writer, st *monitor.Status, zone *time.Location) error {
 		fmt.Fprintf(w, "%s: NOT WATCHING; no daemon runs%s. %d records in the journal.\n",
 			st.Site, lastAlive(st.LastAlive, zone), st.Records)
 	}
+	if st.Disk.Low {
+		fmt.Fprintf(w, "THE DISK IS NEARLY FULL: %.2f GB are left; when there is no room the program stops counting.\n", float64(st.Disk.Free)/1e9)
+	}
 	fmt.Fprintln(w, "\nAlarms")
 	if len(st.Alarms) == 0 {
 		fmt.Fprintln(w, "  none stands")

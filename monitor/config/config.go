@@ -38,6 +38,8 @@ type Site struct {
 	DayStarts Clock          // when a production day starts, by the clock on the wall
 	State     string         // folder of the store, the journal's volumes and held files; absolute
 	DayLogs   string         // folder of the day logs; absolute
+
+	DiskWarning int64 // bytes: with less room on the disk of State there is a warning
 }
 
 // Clock is a time of day.

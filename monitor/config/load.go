@@ -113,6 +113,7 @@ func (c *checker) site(r *rawSite) {
 	s.DayStarts = c.clock("site.day_starts", r.DayStarts)
 	s.State = c.path("site.state", r.State, "state")
 	s.DayLogs = c.path("site.day_logs", r.DayLogs, "daylogs")
+	s.DiskWarning = c.size("site.disk_warning", r.DiskWarning, 1e9)
 	c.cfg.Plan.Site = r.Name
 }
 

@@ -30,6 +30,8 @@ type rawSite struct {
 	DayStarts string `toml:"day_starts"`
 	State     string `toml:"state"`
 	DayLogs   string `toml:"day_logs"`
+
+	DiskWarning string `toml:"disk_warning"`
 }
 
 type rawCharacteristic struct {
