@@ -116,6 +116,11 @@ func TestVerifyFindsChanges(t *testing.T) {
 			a, b := bytes.Clone(bucket(tx, "journal").Get(key(3))), bytes.Clone(bucket(tx, "journal").Get(key(5)))
 			return errors.Join(bucket(tx, "journal").Put(key(3), b), bucket(tx, "journal").Put(key(5), a))
 		}, "record 3"},
+		"the last record is taken out, with its hashes": {func(tx *bolt.Tx) error {
+			k, _ := bucket(tx, "journal").Cursor().Last()
+			k = bytes.Clone(k)
+			return errors.Join(bucket(tx, "journal").Delete(k), bucket(tx, "tree").Delete(k))
+		}, "its end is missing"},
 		"the last record is put twice": {func(tx *bolt.Tx) error {
 			k, v := bucket(tx, "journal").Cursor().Last()
 			return bucket(tx, "journal").Put(key(k[7]+1), bytes.Clone(v))

@@ -85,6 +85,9 @@ func (s *Store) readWhatIs() error {
 	if err != nil {
 		return fmt.Errorf("%w: %s: %w", ErrNotAsSigned, s.beside(checkpointSuffix), err)
 	}
+	if c.Size > s.Next() {
+		return fmt.Errorf("%w: the store in %s has %d records, and a checkpoint of %d was signed: its end is missing", ErrNotAsSigned, s.folder, s.Next(), c.Size)
+	}
 	s.sealing.last, s.sealing.text = c, text
 	return nil
 }
