@@ -56,7 +56,7 @@ func betaRatioOddsLow(a, b, w, wLow, v float64) Odds {
 	if !(x > 0) || !(q > 0) {
 		return certain(x == 0)
 	}
-	av, bw := a*v, b*w
+	av, bw := float64(a*v), float64(b*w)
 	lambda := ((av - bw) + (math.FMA(a, v, -av) - math.FMA(b, wLow, math.FMA(b, w, -bw)))) / (w + v)
 	l := betaLaw(a, b)
 	below, above := l.logTailsFrom(x, q, lambda)

@@ -98,7 +98,7 @@ func (l *law) excess(x, q, low float64) float64 {
 	if l.gamma {
 		return l.a - x
 	}
-	aq, bx := l.a*q, l.b*x
+	aq, bx := float64(l.a*q), float64(l.b*x)
 	return (aq - bx) + (math.FMA(l.a, low, math.FMA(l.a, q, -aq)) - math.FMA(l.b, x, -bx))
 }
 
