@@ -368,3 +368,47 @@ func TestCutShort(t *testing.T) {
 		t.Errorf("a commit afterwards: %v", err)
 	}
 }
+
+// The disk can only be read, as a system leaves it after errors, and then can be written again.
+func TestDiskReadOnly(t *testing.T) {
+	disk := t.TempDir()
+	if err := unix.Mount("tmpfs", disk, "tmpfs", 0, "size=16m"); err != nil {
+		t.Skipf("SKIPPED: a small disk can't be mounted: %v", err)
+	}
+	defer func() {
+		if err := unix.Unmount(disk, 0); err != nil {
+			t.Error(err)
+		}
+	}()
+	folder := filepath.Join(disk, "state")
+	s := open(t, folder)
+	for range 5 {
+		if err := s.Commit(numbered(s)); err != nil {
+			t.Fatal(err)
+		}
+	}
+	if err := s.Close(); err != nil {
+		t.Fatal(err)
+	}
+	if err := unix.Mount("tmpfs", disk, "tmpfs", unix.MS_REMOUNT|unix.MS_RDONLY, ""); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := Open(folder, Options{}); !errors.Is(err, ErrStorage) || !strings.Contains(err.Error(), "read-only") {
+		t.Errorf("a start on a disk that can only be read: %v", err)
+	}
+	r, err := OpenToRead(folder)
+	if err != nil {
+		t.Errorf("to be verified it can be read: %v", err)
+	} else {
+		if _, err := r.Verify(Verification{}); err != nil {
+			t.Error(err)
+		}
+		if err := r.Close(); err != nil {
+			t.Error(err)
+		}
+	}
+	if err := unix.Mount("tmpfs", disk, "tmpfs", unix.MS_REMOUNT, ""); err != nil {
+		t.Fatal(err)
+	}
+	mustHold(t, folder, 5)
+}

@@ -109,3 +109,39 @@ func TestReadErrors(t *testing.T) {
 		t.Error(fmt.Errorf("%w\n%s", err, out))
 	}
 }
+
+// TestHintsOverflow: more happens in a folder than the system's queue of hints holds, and nothing is missed: the look through
+// the folder finds what no hint told of. The bound is one of the machine, so it is put back.
+func TestHintsOverflow(t *testing.T) {
+	const bound = "/proc/sys/fs/inotify/max_queued_events"
+	was, err := os.ReadFile(bound)
+	if err == nil {
+		err = os.WriteFile(bound, []byte("64"), 0o644)
+	}
+	if err != nil {
+		t.Skipf("SKIPPED: the queue of hints can't be made short: %v", err)
+	}
+	t.Cleanup(func() {
+		if err := os.WriteFile(bound, was, 0o644); err != nil {
+			t.Error(err)
+		}
+	})
+	s := watching(t, func(s *station) { s.src.Settle = 0 })
+	s.drop("first.csv", someFile)
+	s.expect("first.csv", "") // the watch has its queue by now
+	const files = 700
+	for i := range files { // nobody takes what is sent meanwhile: the hints pile up
+		s.drop(fmt.Sprintf("%04d.csv", i), strings.ReplaceAll(someFile, "S-", fmt.Sprintf("S%04d-", i)))
+	}
+	seen := map[string]bool{}
+	for len(seen) < files {
+		a := s.next()
+		if a.File == "" {
+			continue
+		}
+		if seen[a.File] {
+			t.Fatalf("%s came twice", a.File)
+		}
+		seen[a.File] = true
+	}
+}
