@@ -22,7 +22,7 @@ type run struct {
 	nodes [160]node
 }
 
-// A level is log h_j over z = w/(w+1), w = sigma/(8 far), far being the larger of |lo| and |hi| and sigma^2 =
+// A level is log h_j over z = w/(w+1), w = 8 sigma/far, far being the larger of |lo| and |hi| and sigma^2 =
 // c/(nu_1+...+nu_j) + s_j+1^2 + ... + s_n^2, which is C/N with the sticks to come at their means: from near 0,
 // where h is rare, to 1, where it is 1/2. (For a window it is log (w+1)h, since that goes with 1/w at
 // last.) To make h a polynomial in z of few terms the 8 does well for Student's law.
@@ -48,14 +48,14 @@ const (
 )
 
 // grades are where the stretches of z end, as far/sigma.
-var grades = [...]float64{260, 150, 85, 45, 20, 7, 0}
+var grades = [...]float64{260, 150, 85, 45, 24, 12, 5, 0}
 
 var surfaces = sync.Pool{New: func() any { return new(surface) }}
 
 func (f *surface) begin(m *mixture, k *contrast) {
 	f.used = 1 // 0 stands for none
 	far := math.Max(math.Abs(m.lo), math.Abs(m.hi))
-	scale := 1 / (64 * far * far)
+	scale := 64 / (far * far)
 	root, nu, rest := math.Sqrt(m.c[0]), k.nu[0], 0.0
 	for j := 1; j < m.n; j++ {
 		rest += float64(k.scale[j] * k.scale[j])
