@@ -12,6 +12,7 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"strings"
 	"sync"
 
 	"github.com/klauspost/compress/zstd"
@@ -23,9 +24,9 @@ import (
 //
 //	volumes/000000000000-000000004213.volume
 //
-//	"steelyard volume 1\n"
-//	frames   each a zstd frame (RFC 8878, with its checksum) of records, one behind the other: of each its length
-//	         (uvarint) and its bytes, as they were hashed into the tree
+//	"steelyard volume 2\n"
+//	frames   each some hundred records, their bytes sorted by kind and packed with zstd (streams.go): read back they are
+//	         to the bit what was hashed into the tree
 //	index    zstd of the frames: of each its first record, offset and length in the file (uvarints)
 //	trailer  SHA-256 of the index as it stands in the file (32 bytes), its length (8 bytes, big-endian),
 //	         "steelyard volume\n"
@@ -47,11 +48,12 @@ var ErrVolume = errors.New("a volume of the journal can't be read")
 
 const (
 	volumesFolder = "volumes"
-	volumeHead    = "steelyard volume 1\n"
+	volumeHead    = "steelyard volume 2\n"
 	volumeTail    = "steelyard volume\n"
 
-	// frameBytes is about how much text goes into one frame: one record is read by unpacking it.
-	frameBytes = 1 << 20
+	// frameBytes and frameRecords are about how much goes into one frame: one record is read by unpacking it.
+	frameBytes   = 512 << 10
+	frameRecords = 1024
 	// mostInVolume bounds a volume, and so the transaction that takes its records out.
 	mostInVolume = 50_000
 )
@@ -82,7 +84,7 @@ var (
 		return mustCoder(zstd.NewWriter(nil, zstd.WithEncoderLevel(zstd.SpeedBestCompression), zstd.WithEncoderConcurrency(1)))
 	})
 	unpacker = sync.OnceValue(func() *zstd.Decoder {
-		return mustCoder(zstd.NewReader(nil, zstd.WithDecoderConcurrency(1), zstd.WithDecoderMaxMemory(1<<30)))
+		return mustCoder(zstd.NewReader(nil, zstd.WithDecoderConcurrency(1), zstd.WithDecoderMaxMemory(mostPlain)))
 	})
 )
 
@@ -158,17 +160,18 @@ func (s *Store) WriteVolume(to uint64) (*Volume, error) {
 
 // packed is the text of a volume.
 func (s *Store) packed(from, to uint64) ([]byte, error) {
-	out, index, plain := []byte(volumeHead), []byte(nil), []byte(nil)
-	first := from
+	out, index, first := []byte(volumeHead), []byte(nil), from
+	var kinds streams
+	plain := 0
 	flush := func(next uint64) {
 		at := len(out)
-		out = packer().EncodeAll(plain, out)
+		out = kinds.pack(out)
 		index = binary.AppendUvarint(binary.AppendUvarint(binary.AppendUvarint(index, first), uint64(at)), uint64(len(out)-at))
-		plain, first = plain[:0], next
+		plain, first = 0, next
 	}
 	err := s.Records(from, to, func(i uint64, record []byte) error {
-		plain = append(binary.AppendUvarint(plain, uint64(len(record))), record...)
-		if len(plain) >= frameBytes {
+		kinds.add(record)
+		if plain += len(record); plain >= frameBytes || i+1-first >= frameRecords {
 			flush(i + 1)
 		}
 		return nil
@@ -176,7 +179,7 @@ func (s *Store) packed(from, to uint64) ([]byte, error) {
 	if err != nil {
 		return nil, err
 	}
-	if len(plain) > 0 {
+	if first < to {
 		flush(to)
 	}
 	at := len(out)
@@ -311,7 +314,13 @@ func readIndex(file *os.File, v *Volume) (index []frame, err error) {
 	if info.Size() != v.Size || v.Size < int64(len(volumeHead)+trailer) {
 		return nil, fmt.Errorf("it has %d bytes, and was written with %d", info.Size(), v.Size)
 	}
-	tail := make([]byte, trailer)
+	head, tail := make([]byte, len(volumeHead)), make([]byte, trailer)
+	if _, err := file.ReadAt(head, 0); err != nil {
+		return nil, err
+	}
+	if string(head) != volumeHead {
+		return nil, fmt.Errorf("its first line is not %q", strings.TrimSpace(volumeHead))
+	}
 	if _, err := file.ReadAt(tail, v.Size-int64(trailer)); err != nil {
 		return nil, err
 	}
@@ -346,15 +355,7 @@ func readFrame(file *os.File, f frame) (records [][]byte, err error) {
 	if _, err := file.ReadAt(packed, f.offset); err != nil {
 		return nil, err
 	}
-	plain, err := unpacker().DecodeAll(packed, nil)
-	if err != nil {
-		return nil, err
-	}
-	c := &columns{rest: plain}
-	for len(c.rest) > 0 && c.err == nil {
-		records = append(records, c.take(c.uvarint()))
-	}
-	return records, c.err
+	return unpack(packed)
 }
 
 // checkVolumes compares the digests of all volumes with what was noted of them.
