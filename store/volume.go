@@ -17,12 +17,14 @@ import (
 
 	"github.com/klauspost/compress/zstd"
 	bolt "go.etcd.io/bbolt"
+
+	"steelyard/store/ledger"
 )
 
 // A volume is a file of records that were taken out of the bbolt file, so that this stays small for years. It is
-// written once, and named by its records:
+// written once, and named by its records and digest, so that no other ever takes its place:
 //
-//	volumes/000000000000-000000004213.volume
+//	volumes/000000000000-000000004213-5f0c3a91.volume
 //
 //	"steelyard volume 2\n"
 //	frames   each some hundred records, their bytes sorted by kind and packed with zstd (streams.go): read back they are
@@ -33,8 +35,8 @@ import (
 //
 // The file is on the disk, and was read back and compared, before the transaction that takes its records out of the
 // journal's bucket and notes it; the record of that names its SHA-256, and so do checkpoints through it.
-// What a crash leaves between is a file that no store knows, and that the next volume replaces. The hashes
-// of the tree stay in the bbolt file.
+// What a crash leaves between is a file that no store knows. The hashes of the tree stay in the bbolt
+// file: what is read from a volume is compared with them, and where one is lost the rest can still be proved.
 type Volume struct {
 	From   uint64 `json:"from"` // first record
 	To     uint64 `json:"to"`   // the record after the last
@@ -54,8 +56,6 @@ const (
 	// frameBytes and frameRecords are about how much goes into one frame: one record is read by unpacking it.
 	frameBytes   = 512 << 10
 	frameRecords = 1024
-	// mostInVolume bounds a volume, and so the transaction that takes its records out.
-	mostInVolume = 50_000
 )
 
 var volumesBucket = []byte("volumes")
@@ -127,66 +127,6 @@ func (s *Store) sealedTo() uint64 {
 		return list[len(list)-1].To
 	}
 	return 0
-}
-
-// WriteVolume writes the oldest records that are not in a volume, up to but not including one, into the next, and
-// reads it back. It is noted, and its records leave the bbolt file, with the Step that has it for Sealed. It is nil
-// where there is nothing to move.
-func (s *Store) WriteVolume(to uint64) (*Volume, error) {
-	from := s.sealedTo()
-	to = min(to, s.Next(), from+mostInVolume)
-	if s.toRead || from >= to {
-		return nil, nil
-	}
-	v := &Volume{From: from, To: to, File: fmt.Sprintf("%012d-%012d.volume", from, to)}
-	text, err := s.packed(from, to)
-	if err != nil {
-		return nil, err
-	}
-	sum := sha256.Sum256(text)
-	v.Size, v.SHA256 = int64(len(text)), hex.EncodeToString(sum[:])
-	folder := filepath.Join(s.folder, volumesFolder)
-	if err := os.MkdirAll(folder, 0o700); err != nil {
-		return nil, fmt.Errorf("%w: %w", ErrVolume, err)
-	}
-	if err := writeWhole(filepath.Join(folder, v.File), text); err != nil {
-		return nil, fmt.Errorf("%w: write %s: %w", ErrVolume, v.File, err)
-	}
-	if err := SyncFolder(s.folder); err != nil {
-		return nil, fmt.Errorf("%w: %w", ErrVolume, err)
-	}
-	return v, s.readBack(v)
-}
-
-// packed is the text of a volume.
-func (s *Store) packed(from, to uint64) ([]byte, error) {
-	out, index, first := []byte(volumeHead), []byte(nil), from
-	var kinds streams
-	plain := 0
-	flush := func(next uint64) {
-		at := len(out)
-		out = kinds.pack(out)
-		index = binary.AppendUvarint(binary.AppendUvarint(binary.AppendUvarint(index, first), uint64(at)), uint64(len(out)-at))
-		plain, first = 0, next
-	}
-	err := s.Records(from, to, func(i uint64, record []byte) error {
-		kinds.add(record)
-		if plain += len(record); plain >= frameBytes || i+1-first >= frameRecords {
-			flush(i + 1)
-		}
-		return nil
-	})
-	if err != nil {
-		return nil, err
-	}
-	if first < to {
-		flush(to)
-	}
-	at := len(out)
-	out = packer().EncodeAll(index, out)
-	sum := sha256.Sum256(out[at:])
-	out = append(append(out, sum[:]...), number(uint64(len(out)-at))...)
-	return append(out, volumeTail...), nil
 }
 
 // readBack compares a volume, as it is on the disk, with the records it is to stand for.
@@ -356,6 +296,25 @@ func readFrame(file *os.File, f frame) (records [][]byte, err error) {
 		return nil, err
 	}
 	return unpack(packed)
+}
+
+// areAsHashed compares records of a volume with their hashes in the tree: a volume that was written anew is not read
+// as if it were the one that was noted.
+func (s *Store) areAsHashed(v *Volume, from uint64, records [][]byte) error {
+	var changed error
+	if err := s.view("read the tree", func(tx *bolt.Tx) error {
+		hashes := readHashes(tx, from, len(records))
+		for i, record := range records {
+			if leaf := ledger.Leaf(record); !bytes.HasPrefix(hashes[i], leaf[:]) {
+				changed = fmt.Errorf("%w: %s: record %d is not the one that its hash was taken of", ErrVolume, v.File, from+uint64(i))
+				return nil
+			}
+		}
+		return nil
+	}); err != nil {
+		return err
+	}
+	return changed
 }
 
 // checkVolumes compares the digests of all volumes with what was noted of them.
