@@ -303,3 +303,33 @@ func packedVolume(t testing.TB, from uint64, records [][]byte) []byte {
 	}
 	return b.Bytes()
 }
+
+// A store that lost a volume goes on under a new origin, which promises the hashes of what was in
+// it, so that the file is known again when it turns up.
+func TestNewOriginWithoutAVolume(t *testing.T) {
+	folder := t.TempDir()
+	s := open(t, folder)
+	many(t, s, 60)
+	sealNext(t, s, 20)
+	sealNext(t, s, 50)
+	path, away := volumeFile(s, 0), filepath.Join(t.TempDir(), "away")
+	closed(t, s)
+	if err := os.Rename(path, away); err != nil {
+		t.Fatal(err)
+	}
+	s, err := Open(folder, Options{NewOrigin: &NewOrigin{Why: "the volume is lost", By: "R. Vale"}})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer func() { closed(t, s) }()
+	sign(t, s)
+	if _, err := s.Verify(Verification{}); !errors.Is(err, ErrVolume) {
+		t.Errorf("without the volume: %v", err)
+	}
+	if err := os.Rename(away, path); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := s.Verify(Verification{}); err != nil {
+		t.Errorf("with it: %v", err)
+	}
+}
