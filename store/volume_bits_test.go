@@ -6,6 +6,7 @@ import (
 	"encoding/hex"
 	"encoding/json"
 	"errors"
+	"flag"
 	"fmt"
 	"os"
 	"path/filepath"
@@ -15,6 +16,8 @@ import (
 	bolt "go.etcd.io/bbolt"
 	"pgregory.net/rapid"
 )
+
+var long = flag.Bool("long", false, "sweep every write, sync and bit, make more images, and kill more often")
 
 // many commits batches of the daemon's kind, which need not last, until there are as many records.
 func many(t testing.TB, s *Store, records uint64) {
