@@ -198,7 +198,7 @@ func (s *Store) inVolume(v Volume, record uint64) ([][]byte, error) {
 	defer s.volumes.mu.Unlock()
 	records, err := s.volumes.read(filepath.Join(s.folder, volumesFolder, v.File), &v, record)
 	if err != nil {
-		return nil, fmt.Errorf("%w: %s, with records %d to %d: %w; put it back from a backup", ErrVolume, v.File, v.From, v.To-1, err)
+		return nil, v.fault(err)
 	}
 	return records, nil
 }
@@ -306,7 +306,7 @@ func (s *Store) areAsHashed(v *Volume, from uint64, records [][]byte) error {
 		hashes := readHashes(tx, from, len(records))
 		for i, record := range records {
 			if leaf := ledger.Leaf(record); !bytes.HasPrefix(hashes[i], leaf[:]) {
-				changed = fmt.Errorf("%w: %s: record %d is not the one that its hash was taken of", ErrVolume, v.File, from+uint64(i))
+				changed = v.fault(fmt.Errorf("record %d is not the one that its hash was taken of", from+uint64(i)))
 				return nil
 			}
 		}
@@ -317,20 +317,40 @@ func (s *Store) areAsHashed(v *Volume, from uint64, records [][]byte) error {
 	return changed
 }
 
+// MissingVolumes says of every volume that is not there, or has not the size that it was written with, which records can't
+// be read. It opens none.
+func (s *Store) MissingVolumes() (faults []error) {
+	for _, v := range s.Volumes() {
+		info, err := os.Stat(filepath.Join(s.folder, volumesFolder, v.File))
+		if err == nil && info.Size() != v.Size {
+			err = fmt.Errorf("it has %d bytes, and was written with %d", info.Size(), v.Size)
+		}
+		if err != nil {
+			faults = append(faults, v.fault(err))
+		}
+	}
+	return faults
+}
+
+// fault says that a volume can't be read.
+func (v *Volume) fault(why error) error {
+	return fmt.Errorf("%w: %s, with records %d to %d: %w; put it back from a backup", ErrVolume, v.File, v.From, v.To-1, why)
+}
+
 // checkVolumes compares the digests of all volumes with what was noted of them.
 func (s *Store) checkVolumes() error {
 	for _, v := range s.Volumes() {
 		file, err := os.Open(filepath.Join(s.folder, volumesFolder, v.File))
 		if err != nil {
-			return fmt.Errorf("%w: %w: %w; put it back from a backup", ErrNotAsSigned, ErrVolume, err)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(err))
 		}
 		sum := sha256.New()
 		n, err := io.Copy(sum, file)
 		if err = errors.Join(err, file.Close()); err != nil {
-			return fmt.Errorf("%w: %w: %s: %w", ErrNotAsSigned, ErrVolume, v.File, err)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(err))
 		}
 		if got := hex.EncodeToString(sum.Sum(nil)); n != v.Size || got != v.SHA256 {
-			return fmt.Errorf("%w: %w: %s, with records %d to %d, was changed since it was written", ErrNotAsSigned, ErrVolume, v.File, v.From, v.To-1)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(errors.New("it was changed since it was written")))
 		}
 	}
 	return nil
