@@ -356,7 +356,7 @@ func (s *Store) checkVolumes() error {
 	return nil
 }
 
-// copyVolumes copies the volumes into a backup.
+// copyVolumes copies the volumes into a backup; those that can't be read, or were changed, are named in the error.
 func (s *Store) copyVolumes(folder string) error {
 	list := s.Volumes()
 	if len(list) == 0 {
@@ -366,14 +366,19 @@ func (s *Store) copyVolumes(folder string) error {
 	if err := os.Mkdir(to, 0o700); err != nil {
 		return err
 	}
+	var faults error
 	for _, v := range list {
 		text, err := os.ReadFile(filepath.Join(s.folder, volumesFolder, v.File))
-		if err == nil {
-			err = writeWhole(filepath.Join(to, v.File), text)
+		if sum := sha256.Sum256(text); err == nil && hex.EncodeToString(sum[:]) != v.SHA256 {
+			err = errors.New("it was changed since it was written")
 		}
 		if err != nil {
-			return fmt.Errorf("%w: %w", ErrVolume, err)
+			faults = errors.Join(faults, v.fault(err))
+			continue
+		}
+		if err := writeWhole(filepath.Join(to, v.File), text); err != nil {
+			return err
 		}
 	}
-	return nil
+	return errors.Join(faults, SyncFolder(folder))
 }

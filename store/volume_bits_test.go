@@ -11,6 +11,7 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"strings"
 	"testing"
 
 	bolt "go.etcd.io/bbolt"
@@ -334,5 +335,91 @@ func TestNewOriginWithoutAVolume(t *testing.T) {
 	}
 	if _, err := s.Verify(Verification{}); err != nil {
 		t.Errorf("with it: %v", err)
+	}
+}
+
+// A volume that is missing, cut, or changed anywhere is named with its records; what is in others and
+// in the journal is read, proved and copied, the store goes on, and all is well once the file is back.
+func TestDamagedVolume(t *testing.T) {
+	s := open(t, t.TempDir())
+	defer func() { closed(t, s) }()
+	many(t, s, 5000)
+	sealNext(t, s, 2000)
+	sealNext(t, s, 4000)
+	path := volumeFile(s, 0)
+	whole, err := os.ReadFile(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for name, damaged := range map[string][]byte{
+		"missing":   nil,
+		"empty":     {},
+		"cut":       whole[:len(whole)-1],
+		"longer":    append(bytes.Clone(whole), 0),
+		"a flip":    append(append(bytes.Clone(whole[:200]), whole[200]^1), whole[201:]...),
+		"no volume": bytes.Repeat([]byte("x"), len(whole)),
+	} {
+		t.Run(name, func(t *testing.T) {
+			if err := os.RemoveAll(path); err != nil {
+				t.Fatal(err)
+			}
+			if damaged != nil {
+				if err := os.WriteFile(path, damaged, 0o600); err != nil {
+					t.Fatal(err)
+				}
+			}
+			if err := anew(s); err != nil {
+				t.Fatal(err)
+			}
+			named := func(err error) {
+				t.Helper()
+				if !errors.Is(err, ErrVolume) || errors.Is(err, ErrStorage) || !strings.Contains(err.Error(), filepath.Base(path)) ||
+					!strings.Contains(err.Error(), "records 0 to 1999") {
+					t.Errorf("%v", err)
+				}
+			}
+			nothing := func(uint64, []byte) error { return nil }
+			named(s.Records(0, 5000, nothing))
+			_, err := s.Verify(Verification{})
+			if named(err); !errors.Is(err, ErrNotAsSigned) {
+				t.Error(err)
+			}
+			if faults := s.MissingVolumes(); (len(damaged) != len(whole)) != (len(faults) == 1) {
+				t.Errorf("%v", faults)
+			} else if len(faults) == 1 {
+				named(faults[0])
+			}
+			if err := s.Records(2000, s.Next(), nothing); err != nil {
+				t.Errorf("what is elsewhere: %v", err)
+			}
+			if _, err := s.Prove(17); err != nil {
+				t.Errorf("the proof of a record that can't be read: %v", err)
+			}
+			copied := filepath.Join(t.TempDir(), "copy")
+			named(s.Backup(copied))
+			readCopy(t, copied)
+			if err := s.Commit(Step{Entries: []Entry{batchWithLooks(s.Next(), 3, 1)}}); err != nil {
+				t.Errorf("it does not go on: %v", err)
+			}
+		})
+	}
+	if err := errors.Join(os.RemoveAll(path), os.WriteFile(path, whole, 0o400), anew(s)); err != nil {
+		t.Fatal(err)
+	}
+	if _, err := s.Verify(Verification{}); err != nil {
+		t.Errorf("with the file put back: %v", err)
+	}
+}
+
+// readCopy reads what a copy without the first volume has.
+func readCopy(t *testing.T, folder string) {
+	t.Helper()
+	c, err := OpenToRead(folder)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer closed(t, c)
+	if err := c.Records(2000, c.Next(), func(uint64, []byte) error { return nil }); err != nil {
+		t.Errorf("the copy: %v", err)
 	}
 }
