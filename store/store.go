@@ -83,6 +83,9 @@ var (
 	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
 		treeBucket, originsBucket, batchesBucket, heldBucket}
 
+	// What is put into these comes behind what is there, so that their pages need no room for more.
+	growing = [][]byte{journalBucket, treeBucket, timesBucket}
+
 	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
 
@@ -390,6 +393,9 @@ func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 		return err
 	}
 	index := number(e.Event.Index)
+	for _, name := range growing {
+		tx.Bucket(name).FillPercent = 0.95
+	}
 	if err := tx.Bucket(journalBucket).Put(index, record); err != nil {
 		return err
 	}
