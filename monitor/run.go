@@ -112,6 +112,7 @@ func (d *Desk) begin() error {
 	if err := d.Adopt(); err != nil {
 		return err
 	}
+	d.missVolumes()
 	if err := d.WriteMissedDayLogs(); errors.Is(err, store.ErrVolume) {
 		d.log.Error().Err(err).Msg("the day logs that were not written at their day's end can't be written now")
 	} else if err != nil {
@@ -440,6 +441,7 @@ func (d *Desk) keepTime(ctx context.Context) {
 	defer tick.Stop()
 	site := d.cfg.Site
 	day, signed := daylog.DayOf(d.now(), site.Zone, site.DayStarts), d.now()
+	d.sealOlder(ctx) // a daemon may never run at a day's end
 	for {
 		select {
 		case <-ctx.Done():
@@ -467,9 +469,7 @@ func (d *Desk) keepTime(ctx context.Context) {
 		} else {
 			d.log.Info().Str("file", markdown).Msg("the day log is written")
 		}
-		if err := d.Seal(day.From, fewestInVolume); err != nil {
-			d.log.Error().Err(err).Msg("move older records into a volume; they stay where they are")
-		}
+		d.sealOlder(ctx)
 		day = daylog.DayOf(now, site.Zone, site.DayStarts)
 	}
 }

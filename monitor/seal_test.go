@@ -23,14 +23,14 @@ func TestSealedWhileRunning(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	if err := d.Seal(time.Now(), 1); err != nil {
+	if err := d.Seal(t.Context(), time.Now(), 1); err != nil {
 		t.Fatal(err)
 	}
 	list := d.store.Volumes()
 	if len(list) != 1 || list[0].To < 9 {
 		t.Fatalf("%+v", list)
 	}
-	if err := d.Seal(time.Now(), 100); err != nil || len(d.store.Volumes()) != 1 {
+	if err := d.Seal(t.Context(), time.Now(), 100); err != nil || len(d.store.Volumes()) != 1 {
 		t.Errorf("too few for a volume: %v", err)
 	}
 	after, err := d.Explain(1)

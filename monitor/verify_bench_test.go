@@ -2,6 +2,7 @@ package monitor
 
 import (
 	"errors"
+	"flag"
 	"fmt"
 	"os"
 	"strings"
@@ -13,13 +14,15 @@ import (
 	"steelyard/store"
 )
 
+var verifyRows = flag.Int("verify-rows", 400_000, "measured rows that BenchmarkVerify verifies")
+
 // BenchmarkVerify verifies journals of files of some rows, with a look at one rule for each, as far as possible in
 // volumes, and prints how long ten million measured rows would take, and the memory at its highest.
 func BenchmarkVerify(b *testing.B) {
 	for _, rowsEach := range []int{12, 200, 1000} {
 		b.Run(fmt.Sprintf("%d rows a file", rowsEach), func(b *testing.B) {
 			folder := b.TempDir()
-			all := max(400_000, 1000*rowsEach)
+			all := max(*verifyRows, 1000*rowsEach)
 			written(b, folder, all/rowsEach, rowsEach)
 			b.ResetTimer()
 			for b.Loop() {

@@ -99,8 +99,8 @@ func (s *Store) LastSigned() uint64 {
 	return s.sealing.last.Size
 }
 
-// Backup writes a consistent copy of the store into a new folder, with the last checkpoint and the key to verify
-// with beside it, but not the key to sign with. It is synced, and read through once, before
+// Backup writes a consistent copy of the store into a new folder, with its volumes, the last checkpoint and the key to verify
+// with beside it, but not the key to sign with. A volume that can't be read is named in the error, and all else copied. It is synced, and read through once, before
 // Backup returns. The store goes on being used meanwhile.
 func (s *Store) Backup(folder string) (err error) {
 	if err := os.MkdirAll(filepath.Dir(folder), 0o755); err != nil {
@@ -117,8 +117,9 @@ func (s *Store) Backup(folder string) (err error) {
 	if err := s.guard("copy", func() error { return copyTo(s.db, path) }); err != nil {
 		return err
 	}
-	if err := s.copyVolumes(folder); err != nil {
-		return err
+	missing := s.copyVolumes(folder)
+	if missing != nil && !errors.Is(missing, ErrVolume) {
+		return missing
 	}
 	if err := checkCopy(path); err != nil {
 		return fmt.Errorf("%w: the copy in %s is damaged: %w", ErrStorage, folder, err)
@@ -129,6 +130,9 @@ func (s *Store) Backup(folder string) (err error) {
 	)
 	if err == nil {
 		err = SyncFolder(filepath.Dir(folder))
+	}
+	if err == nil && missing != nil {
+		err = fmt.Errorf("the copy in %s is whole but for this: %w", folder, missing)
 	}
 	return err
 }

@@ -26,11 +26,15 @@ type inode struct {
 	pending []piece
 }
 
-// piece is one write of at most pieceBytes, or a new size.
+// piece is one write of at most pieceBytes, or a new size. After a sync that failed it is either on the disk or
+// lost, each for itself, and a later sync that succeeds says nothing of it: the system takes its page for clean. What
+// was written later, and synced, is safe.
 type piece struct {
-	at   int64
-	data []byte
-	size int64 // of a change of size; -1 else
+	at     int64
+	data   []byte
+	size   int64 // of a change of size; -1 else
+	failed bool
+	safe   bool
 }
 
 const pieceBytes = 4096
@@ -55,6 +59,9 @@ var call = regexp.MustCompile(`^\d+ +(\w+)\((.*)\) += (-?\d+)`)
 // apply takes one line of strace.
 func (d *disk) apply(t *testing.T, line string) {
 	m := call.FindStringSubmatch(line)
+	if m != nil && m[3] == "-1" && (m[1] == "fsync" || m[1] == "fdatasync") {
+		d.syncFailed(m[2])
+	}
 	if m == nil || strings.HasPrefix(m[3], "-") {
 		return
 	}
@@ -133,7 +140,7 @@ func (d *disk) opened(path, flags, fd string) {
 func (f *inode) write(at int64, data []byte) {
 	for len(data) > 0 {
 		n := min(int64(len(data)), pieceBytes-at%pieceBytes)
-		f.pending = append(f.pending, piece{at, data[:n], -1})
+		f.pending = append(f.pending, piece{at: at, data: data[:n], size: -1})
 		at, data = at+n, data[n:]
 	}
 }
@@ -145,16 +152,31 @@ func (d *disk) sync(fd string) {
 		return
 	}
 	if h.file != nil {
-		for _, p := range h.file.pending {
-			h.file.synced = p.on(h.file.synced)
-		}
-		h.file.pending = nil
+		h.file.sync()
 		return
 	}
 	for _, change := range d.pendingNames {
 		change(d.names)
 	}
 	d.pendingNames = nil
+}
+
+// sync makes safe what was written, but for what a sync that failed has left behind, and what stands on that.
+func (f *inode) sync() {
+	for len(f.pending) > 0 && !f.pending[0].failed {
+		f.synced, f.pending = f.pending[0].on(f.synced), f.pending[1:]
+	}
+	for i := range f.pending {
+		f.pending[i].safe = !f.pending[i].failed
+	}
+}
+
+func (d *disk) syncFailed(fd string) {
+	if h := d.open[fd]; h != nil && h.file != nil {
+		for i := range h.file.pending {
+			h.file.pending[i].failed = !h.file.pending[i].safe
+		}
+	}
 }
 
 func (d *disk) rename(change func(map[string]*inode)) {
@@ -190,10 +212,10 @@ func (d *disk) image(t *testing.T, random *rand.Rand, from, to string) {
 		}
 		content := bytes.Clone(f.synced)
 		for _, p := range f.pending {
-			if random.Float64() >= keep {
+			if !p.safe && random.Float64() >= keep {
 				continue
 			}
-			if p.size < 0 && random.IntN(8) == 0 { // torn at a sector
+			if !p.safe && p.size < 0 && random.IntN(8) == 0 { // torn at a sector
 				p.data = p.data[:min(len(p.data), 512*random.IntN(8))]
 			}
 			content = p.on(content)
@@ -214,10 +236,7 @@ func TestCrashImages(t *testing.T) {
 		t.Skip("strace is not installed")
 	}
 	folder, log := t.TempDir(), filepath.Join(t.TempDir(), "calls")
-	cmd := again(folder, 60, strace, "-f", "-xx", "-s", "4000000", "-o", log,
-		"-e", "trace=openat,close,pwrite64,write,ftruncate,fsync,fdatasync,rename,renameat,renameat2,unlinkat")
-	cmd.Env = append(cmd.Env, childSeals+"=1")
-	if out, err := cmd.CombinedOutput(); err != nil {
+	if out, err := traced(folder, 60, strace, log).CombinedOutput(); err != nil {
 		t.Skipf("strace can't trace here: %v\n%.300s", err, out)
 	}
 	s := open(t, folder)
@@ -226,11 +245,7 @@ func TestCrashImages(t *testing.T) {
 	if err := s.Close(); err != nil {
 		t.Fatal(err)
 	}
-	calls, err := os.ReadFile(log)
-	if err != nil {
-		t.Fatal(err)
-	}
-	lines := strings.Split(string(calls), "\n")
+	lines := callsIn(t, log)
 	images, seed := 60, uint64(7)
 	if *long {
 		images, seed = 2000, rand.Uint64()

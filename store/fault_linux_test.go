@@ -4,7 +4,6 @@ import (
 	"bufio"
 	"bytes"
 	"errors"
-	"flag"
 	"fmt"
 	"math/rand/v2"
 	"os"
@@ -22,8 +21,6 @@ import (
 	"steelyard/rules"
 )
 
-var long = flag.Bool("long", false, "sweep every write and sync, and kill more often")
-
 // The tests of faults run this binary again as a program that commits, so that it can be
 // killed, and traced with strace, which makes its system calls fail.
 const (
@@ -34,7 +31,9 @@ const (
 )
 
 func TestMain(m *testing.M) {
-	if folder := os.Getenv(childFolder); folder != "" {
+	if folder := os.Getenv(childFolder); folder != "" && os.Getenv(childSeals) == "once" {
+		os.Exit(sealOnce(folder))
+	} else if folder != "" {
 		os.Exit(commitAll(folder))
 	}
 	os.Exit(m.Run())

@@ -120,21 +120,18 @@ func (s *Store) beginOrigin(before []Origin, anew *NewOrigin) error {
 	})
 }
 
-// plant makes the tree of the records as they are: a new origin promises what is there.
+// plant makes the tree of the records as they are: a new origin promises what is there. Of a volume
+// that can't be read it promises the hashes that were kept of its records.
 func (s *Store) plant(tx *bolt.Tx) error {
-	if err := tx.DeleteBucket(treeBucket); err != nil {
-		return err
-	}
-	tree, err := tx.CreateBucket(treeBucket)
-	if err != nil {
-		return err
-	}
+	tree := tx.Bucket(treeBucket)
 	var count ledger.Recount
 	for count.Size() < s.sealedTo() {
 		v, _ := s.volumeOf(count.Size())
 		records, err := s.inVolume(v, count.Size())
 		if err != nil {
-			return err
+			if err = plantLeaves(tree, &count, v.To, err); err != nil {
+				return err
+			}
 		}
 		for _, record := range records {
 			if err := tree.Put(number(count.Size()), count.Add(record)); err != nil {
@@ -142,12 +139,36 @@ func (s *Store) plant(tx *bolt.Tx) error {
 			}
 		}
 	}
-	return tx.Bucket(journalBucket).ForEach(func(index, record []byte) error {
+	if err := tx.Bucket(journalBucket).ForEach(func(index, record []byte) error {
 		if binary.BigEndian.Uint64(index) != count.Size() {
 			return fmt.Errorf("record %d is missing", count.Size())
 		}
 		return tree.Put(index, count.Add(record))
-	})
+	}); err != nil {
+		return err
+	}
+	c := tree.Cursor()
+	for k, _ := c.Seek(number(count.Size())); k != nil; k, _ = c.Seek(number(count.Size())) {
+		if err := c.Delete(); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// plantLeaves counts on from the hashes that were kept of records; why is why the records are not there.
+func plantLeaves(tree *bolt.Bucket, count *ledger.Recount, to uint64, why error) error {
+	for count.Size() < to {
+		key := number(count.Size())
+		kept := tree.Get(key)
+		if len(kept) < ledger.HashSize {
+			return fmt.Errorf("record %d and its hash are missing: %w", count.Size(), why)
+		}
+		if err := tree.Put(key, count.AddLeaf(ledger.Hash(kept[:ledger.HashSize]))); err != nil {
+			return err
+		}
+	}
+	return nil
 }
 
 func (s *Store) beside(suffix string) string { return filepath.Join(s.folder, s.origin+suffix) }

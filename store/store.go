@@ -83,6 +83,9 @@ var (
 	buckets = [][]byte{metaBucket, journalBucket, timesBucket, alarmsBucket, stateBucket, filesBucket, contentsBucket, outboxBucket,
 		treeBucket, originsBucket, batchesBucket, heldBucket}
 
+	// What is put into these comes behind what is there, so that their pages need no room for more.
+	growing = [][]byte{journalBucket, treeBucket, timesBucket}
+
 	formatKey, originKey, signedKey = []byte("format"), []byte("origin"), []byte("signed")
 )
 
@@ -390,6 +393,9 @@ func (s *Store) writeEntry(tx *bolt.Tx, e *Entry) error {
 		return err
 	}
 	index := number(e.Event.Index)
+	for _, name := range growing {
+		tx.Bucket(name).FillPercent = 0.95
+	}
 	if err := tx.Bucket(journalBucket).Put(index, record); err != nil {
 		return err
 	}
@@ -456,11 +462,14 @@ func (s *Store) Journal(from, to uint64, visit func(rules.Event, rules.Outcomes)
 }
 
 // Records gives the bytes of the records from one index up to another, in order, to visit,
-// which may keep them; its error ends the visit and is returned. A record that is missing is
+// which may keep them but not change them; its error ends the visit and is returned. A record that is missing is
 // a storage error.
 func (s *Store) Records(from, to uint64, visit func(index uint64, record []byte) error) error {
 	for to = min(to, s.Next()); from < to; {
-		some, err := s.some(from, to)
+		some, in, err := s.some(from, to)
+		if err == nil && in != nil {
+			err = s.areAsHashed(in, from, some)
+		}
 		if err != nil {
 			return err
 		}
@@ -474,11 +483,12 @@ func (s *Store) Records(from, to uint64, visit func(index uint64, record []byte)
 	return nil
 }
 
-// some gives the first records of a range, one at least, from a volume or the bbolt file.
-func (s *Store) some(from, to uint64) (some [][]byte, err error) {
+// some gives the first records of a range, one at least, from the bbolt file or from a volume, which it
+// names.
+func (s *Store) some(from, to uint64) (some [][]byte, in *Volume, err error) {
 	if v, ok := s.volumeOf(from); ok {
 		some, err = s.inVolume(v, from)
-		return some[:min(uint64(len(some)), to-from)], err
+		return some[:min(uint64(len(some)), to-from)], &v, err
 	}
 	err = s.view("read the journal", func(tx *bolt.Tx) (err error) {
 		if _, moved := s.volumeOf(from); !moved {
@@ -489,7 +499,7 @@ func (s *Store) some(from, to uint64) (some [][]byte, err error) {
 	if err == nil && some == nil {
 		return s.some(from, to) // it was moved meanwhile
 	}
-	return some, err
+	return some, nil, err
 }
 
 // readRecords copies the first records of a range, one at least.

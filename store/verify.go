@@ -153,9 +153,10 @@ func inOrigin(c ledger.Checkpoint, origins []Origin) error {
 
 // recount counts records and compares the hashes kept with them.
 func (s *Store) recount(count *ledger.Recount, size uint64, compare func() error, visit func(uint64, []byte) error) error {
+	sealed := noted{store: s}
 	for count.Size() < size {
 		from := count.Size()
-		records, err := s.some(from, size)
+		records, _, err := s.some(from, size)
 		if err != nil {
 			if errors.Is(err, ErrVolume) {
 				err = fmt.Errorf("%w: %w", ErrNotAsSigned, err)
@@ -163,10 +164,8 @@ func (s *Store) recount(count *ledger.Recount, size uint64, compare func() error
 			return err
 		}
 		var hashes [][]byte
-		if err := s.view("verify", func(tx *bolt.Tx) (err error) {
-			for i := range records {
-				hashes = append(hashes, bytes.Clone(tx.Bucket(treeBucket).Get(number(from+uint64(i)))))
-			}
+		if err := s.view("verify", func(tx *bolt.Tx) error {
+			hashes = readHashes(tx, from, len(records))
 			return nil
 		}); err != nil {
 			return err
@@ -175,7 +174,7 @@ func (s *Store) recount(count *ledger.Recount, size uint64, compare func() error
 			if !bytes.Equal(count.Add(record), hashes[i]) {
 				return fmt.Errorf("%w: record %d, or a hash kept with it, was changed", ErrNotAsSigned, from+uint64(i))
 			}
-			if err := compare(); err != nil {
+			if err := errors.Join(sealed.compare(from+uint64(i), record), compare()); err != nil {
 				return err
 			}
 			if visit == nil {
@@ -186,12 +185,12 @@ func (s *Store) recount(count *ledger.Recount, size uint64, compare func() error
 			}
 		}
 	}
-	return nil
+	return sealed.all(size)
 }
 
 // nothingBeyond checks that the tree ends with the journal; both may have grown meanwhile.
 func (s *Store) nothingBeyond(size uint64) error {
-	return s.view("verify", func(tx *bolt.Tx) error {
+	return s.differs(func(tx *bolt.Tx) error {
 		record, _ := tx.Bucket(journalBucket).Cursor().Last()
 		hash, _ := tx.Bucket(treeBucket).Cursor().Last()
 		if !bytes.Equal(record, hash) || size > 0 && binary.BigEndian.Uint64(record)+1 < size {

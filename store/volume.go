@@ -12,28 +12,31 @@ import (
 	"os"
 	"path/filepath"
 	"slices"
+	"strings"
 	"sync"
 
 	"github.com/klauspost/compress/zstd"
 	bolt "go.etcd.io/bbolt"
+
+	"steelyard/store/ledger"
 )
 
 // A volume is a file of records that were taken out of the bbolt file, so that this stays small for years. It is
-// written once, and named by its records:
+// written once, and named by its records and digest, so that no other ever takes its place:
 //
-//	volumes/000000000000-000000004213.volume
+//	volumes/000000000000-000000004213-5f0c3a91.volume
 //
-//	"steelyard volume 1\n"
-//	frames   each a zstd frame (RFC 8878, with its checksum) of records, one behind the other: of each its length
-//	         (uvarint) and its bytes, as they were hashed into the tree
+//	"steelyard volume 2\n"
+//	frames   each some hundred records, their bytes sorted by kind and packed with zstd (streams.go): read back they are
+//	         to the bit what was hashed into the tree
 //	index    zstd of the frames: of each its first record, offset and length in the file (uvarints)
 //	trailer  SHA-256 of the index as it stands in the file (32 bytes), its length (8 bytes, big-endian),
 //	         "steelyard volume\n"
 //
 // The file is on the disk, and was read back and compared, before the transaction that takes its records out of the
 // journal's bucket and notes it; the record of that names its SHA-256, and so do checkpoints through it.
-// What a crash leaves between is a file that no store knows, and that the next volume replaces. The hashes
-// of the tree stay in the bbolt file.
+// What a crash leaves between is a file that no store knows. The hashes of the tree stay in the bbolt
+// file: what is read from a volume is compared with them, and where one is lost the rest can still be proved.
 type Volume struct {
 	From   uint64 `json:"from"` // first record
 	To     uint64 `json:"to"`   // the record after the last
@@ -47,13 +50,12 @@ var ErrVolume = errors.New("a volume of the journal can't be read")
 
 const (
 	volumesFolder = "volumes"
-	volumeHead    = "steelyard volume 1\n"
+	volumeHead    = "steelyard volume 2\n"
 	volumeTail    = "steelyard volume\n"
 
-	// frameBytes is about how much text goes into one frame: one record is read by unpacking it.
-	frameBytes = 1 << 20
-	// mostInVolume bounds a volume, and so the transaction that takes its records out.
-	mostInVolume = 50_000
+	// frameBytes and frameRecords are about how much goes into one frame: one record is read by unpacking it.
+	frameBytes   = 512 << 10
+	frameRecords = 1024
 )
 
 var volumesBucket = []byte("volumes")
@@ -82,7 +84,7 @@ var (
 		return mustCoder(zstd.NewWriter(nil, zstd.WithEncoderLevel(zstd.SpeedBestCompression), zstd.WithEncoderConcurrency(1)))
 	})
 	unpacker = sync.OnceValue(func() *zstd.Decoder {
-		return mustCoder(zstd.NewReader(nil, zstd.WithDecoderConcurrency(1), zstd.WithDecoderMaxMemory(1<<30)))
+		return mustCoder(zstd.NewReader(nil, zstd.WithDecoderConcurrency(1), zstd.WithDecoderMaxMemory(mostPlain)))
 	})
 )
 
@@ -125,65 +127,6 @@ func (s *Store) sealedTo() uint64 {
 		return list[len(list)-1].To
 	}
 	return 0
-}
-
-// WriteVolume writes the oldest records that are not in a volume, up to but not including one, into the next, and
-// reads it back. It is noted, and its records leave the bbolt file, with the Step that has it for Sealed. It is nil
-// where there is nothing to move.
-func (s *Store) WriteVolume(to uint64) (*Volume, error) {
-	from := s.sealedTo()
-	to = min(to, s.Next(), from+mostInVolume)
-	if s.toRead || from >= to {
-		return nil, nil
-	}
-	v := &Volume{From: from, To: to, File: fmt.Sprintf("%012d-%012d.volume", from, to)}
-	text, err := s.packed(from, to)
-	if err != nil {
-		return nil, err
-	}
-	sum := sha256.Sum256(text)
-	v.Size, v.SHA256 = int64(len(text)), hex.EncodeToString(sum[:])
-	folder := filepath.Join(s.folder, volumesFolder)
-	if err := os.MkdirAll(folder, 0o700); err != nil {
-		return nil, fmt.Errorf("%w: %w", ErrVolume, err)
-	}
-	if err := writeWhole(filepath.Join(folder, v.File), text); err != nil {
-		return nil, fmt.Errorf("%w: write %s: %w", ErrVolume, v.File, err)
-	}
-	if err := SyncFolder(s.folder); err != nil {
-		return nil, fmt.Errorf("%w: %w", ErrVolume, err)
-	}
-	return v, s.readBack(v)
-}
-
-// packed is the text of a volume.
-func (s *Store) packed(from, to uint64) ([]byte, error) {
-	out, index, plain := []byte(volumeHead), []byte(nil), []byte(nil)
-	first := from
-	flush := func(next uint64) {
-		at := len(out)
-		out = packer().EncodeAll(plain, out)
-		index = binary.AppendUvarint(binary.AppendUvarint(binary.AppendUvarint(index, first), uint64(at)), uint64(len(out)-at))
-		plain, first = plain[:0], next
-	}
-	err := s.Records(from, to, func(i uint64, record []byte) error {
-		plain = append(binary.AppendUvarint(plain, uint64(len(record))), record...)
-		if len(plain) >= frameBytes {
-			flush(i + 1)
-		}
-		return nil
-	})
-	if err != nil {
-		return nil, err
-	}
-	if len(plain) > 0 {
-		flush(to)
-	}
-	at := len(out)
-	out = packer().EncodeAll(index, out)
-	sum := sha256.Sum256(out[at:])
-	out = append(append(out, sum[:]...), number(uint64(len(out)-at))...)
-	return append(out, volumeTail...), nil
 }
 
 // readBack compares a volume, as it is on the disk, with the records it is to stand for.
@@ -255,7 +198,7 @@ func (s *Store) inVolume(v Volume, record uint64) ([][]byte, error) {
 	defer s.volumes.mu.Unlock()
 	records, err := s.volumes.read(filepath.Join(s.folder, volumesFolder, v.File), &v, record)
 	if err != nil {
-		return nil, fmt.Errorf("%w: %s, with records %d to %d: %w; put it back from a backup", ErrVolume, v.File, v.From, v.To-1, err)
+		return nil, v.fault(err)
 	}
 	return records, nil
 }
@@ -311,7 +254,13 @@ func readIndex(file *os.File, v *Volume) (index []frame, err error) {
 	if info.Size() != v.Size || v.Size < int64(len(volumeHead)+trailer) {
 		return nil, fmt.Errorf("it has %d bytes, and was written with %d", info.Size(), v.Size)
 	}
-	tail := make([]byte, trailer)
+	head, tail := make([]byte, len(volumeHead)), make([]byte, trailer)
+	if _, err := file.ReadAt(head, 0); err != nil {
+		return nil, err
+	}
+	if string(head) != volumeHead {
+		return nil, fmt.Errorf("its first line is not %q", strings.TrimSpace(volumeHead))
+	}
 	if _, err := file.ReadAt(tail, v.Size-int64(trailer)); err != nil {
 		return nil, err
 	}
@@ -346,15 +295,46 @@ func readFrame(file *os.File, f frame) (records [][]byte, err error) {
 	if _, err := file.ReadAt(packed, f.offset); err != nil {
 		return nil, err
 	}
-	plain, err := unpacker().DecodeAll(packed, nil)
-	if err != nil {
-		return nil, err
+	return unpack(packed)
+}
+
+// areAsHashed compares records of a volume with their hashes in the tree: a volume that was written anew is not read
+// as if it were the one that was noted.
+func (s *Store) areAsHashed(v *Volume, from uint64, records [][]byte) error {
+	var changed error
+	if err := s.view("read the tree", func(tx *bolt.Tx) error {
+		hashes := readHashes(tx, from, len(records))
+		for i, record := range records {
+			if leaf := ledger.Leaf(record); !bytes.HasPrefix(hashes[i], leaf[:]) {
+				changed = v.fault(fmt.Errorf("record %d is not the one that its hash was taken of", from+uint64(i)))
+				return nil
+			}
+		}
+		return nil
+	}); err != nil {
+		return err
 	}
-	c := &columns{rest: plain}
-	for len(c.rest) > 0 && c.err == nil {
-		records = append(records, c.take(c.uvarint()))
+	return changed
+}
+
+// MissingVolumes says of every volume that is not there, or has not the size that it was written with, which records can't
+// be read. It opens none.
+func (s *Store) MissingVolumes() (faults []error) {
+	for _, v := range s.Volumes() {
+		info, err := os.Stat(filepath.Join(s.folder, volumesFolder, v.File))
+		if err == nil && info.Size() != v.Size {
+			err = fmt.Errorf("it has %d bytes, and was written with %d", info.Size(), v.Size)
+		}
+		if err != nil {
+			faults = append(faults, v.fault(err))
+		}
 	}
-	return records, c.err
+	return faults
+}
+
+// fault says that a volume can't be read.
+func (v *Volume) fault(why error) error {
+	return fmt.Errorf("%w: %s, with records %d to %d: %w; put it back from a backup", ErrVolume, v.File, v.From, v.To-1, why)
 }
 
 // checkVolumes compares the digests of all volumes with what was noted of them.
@@ -362,21 +342,21 @@ func (s *Store) checkVolumes() error {
 	for _, v := range s.Volumes() {
 		file, err := os.Open(filepath.Join(s.folder, volumesFolder, v.File))
 		if err != nil {
-			return fmt.Errorf("%w: %w: %w; put it back from a backup", ErrNotAsSigned, ErrVolume, err)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(err))
 		}
 		sum := sha256.New()
 		n, err := io.Copy(sum, file)
 		if err = errors.Join(err, file.Close()); err != nil {
-			return fmt.Errorf("%w: %w: %s: %w", ErrNotAsSigned, ErrVolume, v.File, err)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(err))
 		}
 		if got := hex.EncodeToString(sum.Sum(nil)); n != v.Size || got != v.SHA256 {
-			return fmt.Errorf("%w: %w: %s, with records %d to %d, was changed since it was written", ErrNotAsSigned, ErrVolume, v.File, v.From, v.To-1)
+			return fmt.Errorf("%w: %w", ErrNotAsSigned, v.fault(errors.New("it was changed since it was written")))
 		}
 	}
 	return nil
 }
 
-// copyVolumes copies the volumes into a backup.
+// copyVolumes copies the volumes into a backup; those that can't be read, or were changed, are named in the error.
 func (s *Store) copyVolumes(folder string) error {
 	list := s.Volumes()
 	if len(list) == 0 {
@@ -386,14 +366,19 @@ func (s *Store) copyVolumes(folder string) error {
 	if err := os.Mkdir(to, 0o700); err != nil {
 		return err
 	}
+	var faults error
 	for _, v := range list {
 		text, err := os.ReadFile(filepath.Join(s.folder, volumesFolder, v.File))
-		if err == nil {
-			err = writeWhole(filepath.Join(to, v.File), text)
+		if sum := sha256.Sum256(text); err == nil && hex.EncodeToString(sum[:]) != v.SHA256 {
+			err = errors.New("it was changed since it was written")
 		}
 		if err != nil {
-			return fmt.Errorf("%w: %w", ErrVolume, err)
+			faults = errors.Join(faults, v.fault(err))
+			continue
+		}
+		if err := writeWhole(filepath.Join(to, v.File), text); err != nil {
+			return err
 		}
 	}
-	return nil
+	return errors.Join(faults, SyncFolder(folder))
 }

@@ -65,6 +65,8 @@ func (c *Collector) Add(e *rules.Event, out *rules.Outcomes) {
 		c.decided(e.At, e.Decided)
 	case e.Stepped != nil:
 		c.stepped(e)
+	case e.Sealed != nil:
+		c.remark(e.At, "The records %d to %d were moved into the volume %s; its SHA-256 is %s.", e.Sealed.From, e.Sealed.To-1, e.Sealed.File, e.Sealed.SHA256)
 	case e.Segment != nil:
 		since := ""
 		if t := e.Segment.Since; !t.IsZero() {

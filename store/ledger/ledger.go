@@ -57,6 +57,9 @@ func (k Kept) ReadHashes(indexes []int64) ([]Hash, error) {
 // keptWith is how many hashes are kept with a record.
 func keptWith(record uint64) int { return 1 + bits.TrailingZeros64(record+1) }
 
+// Leaf is the hash of a record.
+func Leaf(record []byte) Hash { return tlog.RecordHash(record) }
+
 // Grow is what is to be kept with the record that becomes number n.
 func Grow(n uint64, record []byte, kept Kept) ([]byte, error) {
 	hashes, err := tlog.StoredHashes(int64(n), record, kept)
@@ -84,8 +87,10 @@ type Recount struct {
 func (r *Recount) Size() uint64 { return r.size }
 
 // Add adds a record and returns what is to be kept with it.
-func (r *Recount) Add(record []byte) []byte {
-	h := tlog.RecordHash(record)
+func (r *Recount) Add(record []byte) []byte { return r.AddLeaf(Leaf(record)) }
+
+// AddLeaf adds a record of which only the hash is there.
+func (r *Recount) AddLeaf(h Hash) []byte {
 	b := append(make([]byte, 0, HashSize*keptWith(r.size)), h[:]...)
 	for rest := r.size; rest&1 == 1; rest >>= 1 {
 		last := len(r.roots) - 1
