@@ -248,7 +248,7 @@ func TestCrashImages(t *testing.T) {
 	lines := callsIn(t, log)
 	images, seed := 60, uint64(7)
 	if *long {
-		images, seed = 2000, rand.Uint64()
+		images, seed = 2200, rand.Uint64()
 	}
 	random := rand.New(rand.NewPCG(seed, 0))
 	chance := float64(images) / float64(len(lines))
