@@ -5,7 +5,7 @@
 // Buckets, their keys and values. Numbers in keys are 8 bytes, big-endian, so that they sort;
 // strings in composite keys end with a zero byte, which no source, feed or file name holds.
 //
-//	meta     "format"                 → "4": the version of this layout; another is refused
+//	meta     "format"                 → "5": the version of this layout; another is refused
 //	         "origin"                 → a random UUID, made with the store or its new origin
 //	         "signed"                 → size of the last checkpoint that Commit knew of
 //	origins  number, from 0           → Origin as JSON
@@ -63,7 +63,7 @@ var ErrStorage = errors.New("storage failed")
 
 const (
 	fileName = "steelyard.db"
-	format   = "4"
+	format   = "5"
 )
 
 var (
